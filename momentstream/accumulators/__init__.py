@@ -1,0 +1,1 @@
+"""What users hold: accumulators, one file each, over one shared base and one door."""

@@ -1,0 +1,129 @@
+"""Foreign columns and frames, read through their own methods: values plus mask.
+
+Nothing is imported for them, and nothing passes through a floating copy: integers keep all their
+digits, and a null is a mask entry, not a number.
+"""
+
+import sys
+
+import numpy as np
+
+
+def origin(value):
+    """The package a value's type comes from."""
+    return type(value).__module__.partition(".")[0]
+
+
+def check_dtype(array):
+    """Refuse arrays that do not hold real numbers of at most 64 bits."""
+    kind = array.dtype.kind
+    if kind in "biuf" and array.dtype.itemsize <= 8:
+        return array
+    name = str(array.dtype)
+    cure = {
+        "c": "feed its real and imaginary parts apart",
+        "O": 'convert it first, say with .astype("float64")',
+        "U": 'convert it first, say with .astype("float64")',
+        "S": 'convert it first, say with .astype("float64")',
+        "M": 'feed integers, say with .astype("int64")',
+        "m": 'feed integers, say with .astype("int64")',
+        "f": 'round it to double precision first, with .astype("float64")',
+    }.get(kind, "feed real numbers")
+    raise TypeError(f"values must be real numbers of at most 64 bits, got dtype {name}; {cure}")
+
+
+def read_column(values):
+    """An array of real numbers, and a mask of what is missing (or None).
+
+    Parameters
+    ----------
+    values
+        A NumPy array (masked too), a pandas, Polars or Arrow column, or anything with
+        ``__array__`` or a buffer.
+    """
+    package = origin(values)
+    masked = sys.modules.get("numpy.ma")
+    if masked is not None and isinstance(values, masked.MaskedArray):
+        mask = masked.getmask(values)
+        return check_dtype(masked.getdata(values)), None if mask is masked.nomask else mask
+    if package == "pandas":
+        return _read_pandas(values)
+    if package == "polars":
+        return _read_nullable(values, values.null_count, "is_null", {})
+    if package == "pyarrow":
+        return _read_nullable(
+            values, lambda: values.null_count, "is_null", {"zero_copy_only": False}
+        )
+    return check_dtype(np.asarray(values)), None
+
+
+def _read_pandas(values):
+    dtype = getattr(values, "dtype", None)
+    if isinstance(dtype, np.dtype):
+        return check_dtype(values.to_numpy() if hasattr(values, "to_numpy") else values), None
+    plain = getattr(dtype, "numpy_dtype", None)
+    if plain is None or plain.kind not in "biuf":
+        if getattr(getattr(dtype, "subtype", None), "kind", "") in ("b", "i", "u", "f"):
+            return check_dtype(np.asarray(values)), None
+        raise TypeError(f"values must be real numbers, got a column of dtype {dtype}")
+    mask = np.asarray(values.isna())
+    if not mask.any():
+        return check_dtype(values.to_numpy(dtype=plain)), None
+    return check_dtype(values.to_numpy(dtype=plain, na_value=plain.type(0))), mask
+
+
+def _read_nullable(values, null_count, is_null, options):
+    """Columns with a validity bitmap: nulls are filled, and marked in a mask."""
+    count = null_count()
+    if not count:
+        array = values.to_numpy(**_accepted(values, options))
+        return check_dtype(np.asarray(array)), None
+    kind = str(getattr(values, "dtype", getattr(values, "type", ""))).lower()
+    filled = values.fill_null(False if kind.startswith("bool") else 0)
+    mask = getattr(values, is_null)()
+    return (
+        check_dtype(np.asarray(filled.to_numpy(**_accepted(filled, options)))),
+        np.asarray(mask.to_numpy(**_accepted(mask, options)), dtype=bool),
+    )
+
+
+def _accepted(values, options):
+    # Chunked Arrow columns take no such option: they always copy.
+    return {} if hasattr(values, "chunks") else options
+
+
+def is_frame(values):
+    """Whether a value is a table of named columns."""
+    if isinstance(values, np.ndarray):
+        return False
+    if hasattr(values, "column_names") and hasattr(values, "column"):
+        return True
+    return hasattr(values, "columns") and hasattr(values, "dtypes") and hasattr(values, "shape")
+
+
+def read_frame(values, names, size):
+    """The columns of a frame in the order of ``names`` (its own where None), values and masks."""
+    own = getattr(values, "column_names", None)
+    own = [str(name) for name in (values.columns if own is None else own)]
+    if len(set(own)) != len(own):
+        raise ValueError(f"the frame has two columns of one name: {own}")
+    if names is not None:
+        missing = [name for name in names if name not in own]
+        extra = [name for name in own if name not in names]
+        if missing or extra:
+            raise ValueError(
+                f"the frame's columns do not match the names: missing {missing}, extra {extra}; "
+                f"select {list(names)} first"
+            )
+    elif size is not None and len(own) != size:
+        raise ValueError(f"the frame has {len(own)} columns, the accumulator {size} channels")
+    places = range(len(own)) if names is None else [own.index(name) for name in names]
+    return [read_column(_column_at(values, place)) for place in places]
+
+
+def _column_at(values, place):
+    if hasattr(values, "iloc"):
+        return values.iloc[:, place]
+    if hasattr(values, "get_columns"):
+        return values.get_columns()[place]
+    return values.column(place)

@@ -1,0 +1,371 @@
+"""The one door for what goes in: everything becomes stretches of doubles.
+
+A stretch is ``(x, low, w)``: contiguous doubles (or, passed as they are, single-precision
+readings), the second parts of integers that no double holds (or None), and weights (or None).
+A missing entry is a NaN in ``x``.
+"""
+
+import struct
+from collections import deque
+from itertools import islice
+from numbers import Number
+
+import numpy as np
+
+from .columns import check_dtype, is_frame, origin, read_column, read_frame
+
+STRETCH = 1 << 16  # readings converted at a time
+CHUNK = 4096  # items of an iterator taken at a time
+_EXACT = 2**53
+
+
+def refuse_type(values):
+    """The TypeError for what is never taken."""
+    name = type(values).__name__
+    cure = {
+        "str": "parse it into numbers first",
+        "bytes": "np.frombuffer(data, dtype) reads numbers from bytes",
+        "bytearray": "np.frombuffer(data, dtype) reads numbers from bytes",
+        "dict": "feed .values() as a list",
+        "set": "a set loses repeated readings; feed a list",
+        "frozenset": "a set loses repeated readings; feed a list",
+        "complex": "feed the real and imaginary parts apart",
+        "Decimal": "convert it with float()",
+        "Fraction": "convert it with float()",
+        "longdouble": "convert it with float()",
+        "NoneType": "leave missing readings out, or feed nan",
+        "NAType": "leave missing readings out, or feed nan",
+    }.get(name, "feed a number, an array of real numbers, or an iterable of numbers")
+    return TypeError(f"values must be real numbers, got {name}; {cure}")
+
+
+def split_integers(array):
+    """Doubles, and what they leave of 64-bit integers (None where they leave nothing)."""
+    if array.dtype.itemsize < 8 or array.dtype.kind not in "iu":
+        return array.astype(np.float64), None
+    upper = (array >> 32).astype(np.float64) * 4294967296.0
+    lower = (array & 0xFFFFFFFF).astype(np.float64)
+    total = upper + lower
+    rest = lower - (total - upper)
+    return total, rest if rest.any() else None
+
+
+def pack_numbers(items):
+    """A list of numbers as doubles and, for wide integers, their second parts.
+
+    Raises
+    ------
+    TypeError
+        An item is not a real number.
+    ValueError
+        An integer is outside -2**63 .. 2**64 - 1.
+    """
+    x = np.empty(len(items))
+    try:
+        deque(map(float.conjugate, items), maxlen=0)  # the fastest test that all are floats
+    except TypeError:
+        return _pack_mixed(items, x)
+    struct.pack_into(f"{len(items)}d", x, 0, *items)
+    return x, None
+
+
+def _pack_mixed(items, x):
+    low = None
+    for i, item in enumerate(items):
+        if isinstance(item, np.ndarray) and item.ndim == 0:
+            item = item[()]
+        if isinstance(item, (bool, np.bool_)):
+            x[i] = bool(item)
+        elif isinstance(item, (int, np.integer)) and not isinstance(item, np.timedelta64):
+            value = int(item)
+            if not -(2**63) <= value < 2**64:
+                raise ValueError(
+                    f"integers must lie in -2**63 .. 2**64 - 1, got {value} at item {i}"
+                )
+            x[i] = value
+            if not -_EXACT <= value <= _EXACT:
+                rest = value - int(x[i])
+                if rest:
+                    if low is None:
+                        low = np.zeros(len(items))
+                    low[i] = rest
+        elif isinstance(item, (float, np.float32, np.float16)):
+            x[i] = item
+        else:
+            raise refuse_type(item)
+    return x, low
+
+
+def _regular(values):
+    """The numbers in nested lists, flat, and their shape; ragged lists are a ValueError."""
+    if isinstance(values, np.ndarray):
+        return list(check_dtype(values).ravel()), values.shape
+    if not isinstance(values, (list, tuple)):
+        return [values], ()
+    if not any(isinstance(item, (list, tuple, np.ndarray)) for item in values):
+        return values, (len(values),)
+    flat: list = []
+    inner = None
+    for i, item in enumerate(values):
+        part, shape = _regular(item)
+        if inner is not None and shape != inner:
+            raise ValueError(f"ragged lists: item {i} has shape {shape}, those before it {inner}")
+        inner = shape
+        flat.extend(part)
+    return flat, (len(values), *(inner or ()))
+
+
+def writable(array):
+    """A view that may be written to.
+
+    Compiled kernels would be compiled once more for read-only arrays; they never write to these.
+    """
+    return array if array.flags.writeable else np.asarray(_Lent(array))
+
+
+class _Lent:
+    def __init__(self, array):
+        self.owner = array
+        lent = dict(array.__array_interface__)
+        lent["data"] = (lent["data"][0], False)
+        self.__array_interface__ = lent
+
+
+class Form:
+    """What an accumulator takes: the shape of a reading, its channels and their names."""
+
+    __slots__ = ("shape", "size", "names")
+
+    def __init__(self, shape, names):
+        self.shape = shape
+        self.size = int(np.prod(shape, dtype=np.int64)) if shape else None
+        self.names = names
+
+    def rows(self, shape):
+        """How many readings an array of this shape holds; ValueError where it does not fit."""
+        if not self.shape:
+            return int(np.prod(shape, dtype=np.int64))
+        if shape == self.shape:
+            return 1
+        if shape[1:] == self.shape:
+            return shape[0]
+        if 0 in shape and len(shape) == 1:
+            return 0
+        raise ValueError(
+            f"readings must have shape {self.shape}, a chunk (n, {str(self.shape)[1:-1]}), "
+            f"got shape {tuple(shape)}"
+        )
+
+    def fold(self, x):
+        """Flat readings as one row a reading."""
+        return x if self.size is None else x.reshape(-1, self.size)
+
+
+def stretches(values, weights, form):
+    """Whether all comes as one stretch, and an iterator over the stretches.
+
+    Parameters
+    ----------
+    values : anything an accumulator's ``update`` takes
+    weights : None, number, array or iterator
+    form : Form
+    """
+    if isinstance(values, (int, float, np.number, np.bool_)) or _is_point(values):
+        if form.shape:
+            form.rows(np.shape(values))
+        x, low = pack_numbers([values])
+        return True, iter([(x, low, _weights_of(weights, 1))])
+    if values is None or isinstance(values, (str, bytes, bytearray, dict, set, frozenset)):
+        raise refuse_type(values)
+    if isinstance(values, Number) or (isinstance(values, np.generic) and not values.shape):
+        raise refuse_type(values)
+    if is_frame(values):
+        return _frame_stretches(values, weights, form)
+    if not isinstance(values, np.ndarray) and hasattr(values, "__next__"):
+        return False, _iterator_stretches(values, weights, form)
+    if _is_array(values):
+        data, mask = read_column(values)
+        return _array_stretches(data, mask, weights, form)
+    if not hasattr(values, "__iter__"):
+        raise refuse_type(values)
+    return _list_stretches(values, weights, form)
+
+
+def _is_point(values):
+    return isinstance(values, np.ndarray) and values.ndim == 0 and values.dtype.kind in "biuf"
+
+
+def _is_array(values):
+    if isinstance(values, (list, tuple, range, deque)):
+        return False
+    return (
+        isinstance(values, (np.ndarray, memoryview))
+        or origin(values) in ("pandas", "polars", "pyarrow", "array")
+        or hasattr(values, "__array__")
+        or hasattr(values, "__array_interface__")
+    )
+
+
+def _weights_of(weights, n):
+    """Weights as an array of n doubles, or None."""
+    if weights is None:
+        return None
+    if isinstance(weights, (str, bytes)):
+        raise TypeError(f"weights must be real numbers, got {type(weights).__name__}")
+    if hasattr(weights, "__next__"):
+        weights = list(islice(weights, n + 1))
+    if isinstance(weights, (list, tuple, range, deque)):
+        w = pack_numbers(list(weights))[0]
+    else:
+        try:
+            data, mask = read_column(weights)
+        except TypeError as error:
+            raise TypeError(str(error).replace("values", "weights", 1)) from None
+        if mask is not None and mask.any():
+            raise ValueError(f"weights must not be missing, one is at {int(np.argmax(mask))}")
+        w = data.astype(np.float64)
+        if w.ndim == 0:
+            return np.full(n, float(w))
+        w = np.ravel(w)
+    if len(w) != n:
+        raise ValueError(f"weights must have one entry a reading: {n} readings, {len(w)} weights")
+    return w + 0.0  # -0.0 is zero
+
+
+def _array_stretches(data, mask, weights, form):
+    n = form.rows(data.shape)
+    w = _weights_of(weights, n)
+    if mask is not None and not mask.any():
+        mask = None
+    plain = data.dtype == np.float64 or (data.dtype == np.float32 and not form.shape and w is None)
+    if plain and mask is None and data.flags.c_contiguous and data.flags.aligned:
+        if data.dtype.isnative:
+            return True, iter([(form.fold(writable(data).reshape(-1)), None, w)])
+    if n <= CHUNK and data.size <= STRETCH:
+        x, low = _converted(np.ascontiguousarray(data).reshape(-1), mask)
+        return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
+    return False, _converted_stretches(data, mask, w, form, n)
+
+
+def _converted_stretches(data, mask, w, form, n):
+    size = form.size or 1
+    rows = max(1, STRETCH // size)
+    done = 0
+    kept: list = []
+    masks: list = []
+    held = 0
+    if mask is not None:
+        mask = np.broadcast_to(mask, data.shape)
+    for part, missing in _pieces(data, mask):
+        kept.append(part)
+        masks.append(missing)
+        held += part.size
+        if held >= rows * size or done * size + held == n * size:
+            flat = np.concatenate(kept) if len(kept) > 1 else kept[0]
+            gone = None
+            if mask is not None:
+                gone = np.concatenate(masks) if len(masks) > 1 else masks[0]
+            take = flat.size // size * size
+            x, low = _converted(flat[:take], None if gone is None else gone[:take])
+            count = take // size
+            part_w = None if w is None else w[done : done + count]
+            yield form.fold(x), None if low is None else form.fold(low), part_w
+            done += count
+            kept, masks = [flat[take:]], [None if gone is None else gone[take:]]
+            held = flat.size - take
+
+
+def _pieces(data, mask):
+    """Flat parts of an array in C order, at most a stretch long, whatever its layout."""
+    if data.ndim == 0:
+        yield data.reshape(1), None if mask is None else mask.reshape(1)
+    elif data.ndim == 1 or data.flags.c_contiguous:
+        flat = data.reshape(-1)
+        gone = None if mask is None else mask.reshape(-1)
+        for start in range(0, flat.size, STRETCH):
+            stop = start + STRETCH
+            yield flat[start:stop], None if gone is None else gone[start:stop]
+    elif data[0].size > STRETCH:
+        for i in range(len(data)):
+            yield from _pieces(data[i], None if mask is None else mask[i])
+    elif data.size:
+        rows = STRETCH // data[0].size
+        for start in range(0, len(data), rows):
+            part = data[start : start + rows].reshape(-1)
+            yield part, None if mask is None else mask[start : start + rows].reshape(-1)
+
+
+def _converted(flat, mask):
+    """Doubles and second parts of a flat array in any dtype; masked entries become NaN."""
+    if not flat.dtype.isnative:
+        flat = flat.astype(flat.dtype.newbyteorder("="))
+    x, low = split_integers(flat)
+    if mask is not None:
+        x[mask] = np.nan
+        if low is not None:
+            low[mask] = 0.0
+    return x, low
+
+
+def _list_stretches(values, weights, form):
+    values = values if isinstance(values, (list, tuple)) else list(values)
+    flat, shape = _regular(values)
+    n = form.rows(shape)
+    x, low = pack_numbers(flat)
+    w = _weights_of(weights, n)
+    return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
+
+
+def _iterator_stretches(values, weights, form):
+    if weights is not None and np.ndim(weights) == 0 and not hasattr(weights, "__iter__"):
+        beside = None
+    else:
+        beside = None if weights is None else iter(weights)
+    while True:
+        items = list(islice(values, CHUNK))
+        if beside is not None:
+            part = list(islice(beside, len(items) if items else 1))
+            if len(part) != len(items):
+                fewer = "weights" if len(part) < len(items) else "readings"
+                raise ValueError(f"readings and weights must be as many: the {fewer} ran out")
+        if not items:
+            return
+        if form.shape:
+            flat, shape = _regular(items)
+            if shape[1:] != form.shape:
+                form.rows(shape)
+            x, low = pack_numbers(flat)
+        else:
+            x, low = pack_numbers(items)
+        w = _weights_of(weights if beside is None else part, len(items))
+        yield form.fold(x), None if low is None else form.fold(low), w
+        if len(items) < CHUNK and beside is None:
+            return
+
+
+def _frame_stretches(values, weights, form):
+    columns = read_frame(values, form.names, form.size if form.shape else None)
+    if form.shape and len(form.shape) != 1:
+        raise ValueError(f"a frame holds readings of one axis, the accumulator has {form.shape}")
+    n = len(columns[0][0]) if columns else 0
+    w = _weights_of(weights, n if form.shape else n * len(columns))
+
+    def read():
+        rows = max(1, STRETCH // max(1, len(columns)))
+        for start in range(0, n, rows):
+            stop = min(start + rows, n)
+            x = np.empty((stop - start, len(columns)))
+            low = None
+            for j, (data, mask) in enumerate(columns):
+                part_mask = None if mask is None else mask[start:stop]
+                x[:, j], rest = _converted(data[start:stop], part_mask)
+                if rest is not None:
+                    if low is None:
+                        low = np.zeros_like(x)
+                    low[:, j] = rest
+            size = 1 if form.shape else len(columns)
+            part_w = None if w is None else w[start * size : stop * size]
+            flat = None if low is None else form.fold(low.reshape(-1))
+            yield form.fold(x.reshape(-1)), flat, part_w
+
+    return False, read()

@@ -1,0 +1,918 @@
+"""Moments of a stream of readings, or of many streams side by side.
+
+Payload of a frame of kind 1 (see ``momentstream.codec`` for the frame; p is the order, made even;
+C the number of channels, 1 where the shape is empty; F = p + 3 doubles a vector, + 4 with weights):
+
+==================  ===============================================================================
+type                meaning
+==================  ===============================================================================
+5 x uint8           order; weights 0 none, 1 frequency, 2 reliability; nonfinite 0 raise, 1 omit,
+                    2 propagate; transform 0 none, 1 log, 2 reciprocal, 3 abs; number of axes
+uint8               1 if names follow
+axes x uint64       the shape
+text x C            the names, if any
+C x 2 int64         readings counted, readings omitted
+C x 2 doubles       least and greatest reading (+inf, -inf when empty, NaN when unknown)
+C x F doubles       the moment vector: mean, its rest, scale s, W, M2 .. Mp and, with weights, weight
+                    scale t, V2, V3, V4.  The mean is (mean + rest) * 2**s, M_k stands in units of
+                    2**(k * s + t), W of 2**t, V_j of 2**(j * t)
+==================  ===============================================================================
+
+A working state (flag 1) has instead of the last the base's vector, and then:
+
+==================  ===============================================================================
+uint64              finished blocks n; the tree has a vector for every bit set in n
+uint32              f, the rows of the unfinished block
+uint8               1 if second parts of wide integers follow
+C x F doubles       a vector for every bit set in n, from the lowest up
+f x C doubles       the readings of the unfinished block; second parts likewise, if any
+f doubles           their weights, with weights
+==================  ===============================================================================
+
+There the counts and extremes are those of base and finished blocks.
+"""
+
+import numpy as np
+
+from ..algebra import central as _central
+from ..codec import CONTINUED, register
+from ..display.text import one_line
+from ..errors import MergeError, NonFiniteError, StateError
+from ..statistics.readout import Statistics, View, checked_degree
+from ..statistics.summary import Summary, affine_view, scaled_vector
+from .base import Accumulator
+from .door import Form, pack_numbers, stretches
+from .lazy import vector as _vector
+from .stream import POLICIES, Stream, even
+from .transforms import TRANSFORMS, transformed
+
+_WEIGHTS = (None, "frequency", "reliability")
+_FLUSH = 1024
+_LARGEST_SCALE = 4096
+_MOST = 2**63 - 1
+
+
+@register(1)
+class Moments(Accumulator, Statistics):
+    """Count, mean and central moments of everything that was fed, in one pass and bounded memory.
+
+    =============  =================================================================
+    feeding        ``update``, ``tap``
+    combining      ``merge``, ``+``, ``sum(parts)``, ``remove``, ``affine``, ``copy``,
+                   ``clear``
+    reading        ``mean variance std skewness kurtosis central raw standardized
+                   cumulant k_statistic minimum maximum dc rms ac_rms power
+                   crest_factor``, ``summary``, ``channel``
+    knowing        ``count omitted weight effective_count order shape names weights
+                   nonfinite transform``
+    saving         ``to_bytes``, ``from_bytes``, pickling, ``momentstream.save``
+    =============  =================================================================
+
+    Parameters
+    ----------
+    order : int, default 4
+        The highest moment kept, 1 to 16.
+    shape : int or tuple of int, default ()
+        The shape of one reading; its channels are read each on its own.
+    names : sequence of str, optional
+        Names of the channels of one axis; they give the shape, and a data frame's columns are
+        matched by them.
+    weights : None, "frequency" or "reliability", default None
+        Readings come with weights: how many times each occurred, or how far it is to be trusted.
+    nonfinite : "raise", "omit" or "propagate", default "raise"
+        What a NaN, an infinity, a null or a masked entry does.
+    transform : None, "log", "reciprocal" or "abs", default None
+        Keep the moments of log x, 1 / x or abs(x); a reading outside the domain is missing.
+
+    Raises
+    ------
+    ValueError, TypeError
+        An argument is not one of these.
+
+    Notes
+    -----
+    However the readings are cut into calls, the result is the same to the last bit.  Order 4 keeps
+    about 120 bytes of state, and while it is fed one block of 8192 readings (for channels up to
+    2048 rows).  One accumulator belongs to one thread at a time; different ones may be fed at once,
+    and the compiled parts run without the interpreter lock.  ``==`` compares settled states bit
+    for bit, nan equal to nan.
+
+    Examples
+    --------
+    >>> import momentstream as ms
+    >>> morning = ms.Moments().update([4.1, 4.3, 4.2])
+    >>> evening = ms.Moments().update(x / 10 for x in (39, 41))
+    >>> day = morning + evening
+    >>> day.count, round(day.mean(), 3), round(day.std(ddof=1), 4)
+    (5, 4.12, 0.1483)
+    """
+
+    __slots__ = (
+        "_order", "_shape", "_names", "_weights", "_nonfinite", "_transform",
+        "_form", "_stream", "_pending", "_quick", "_settled", "__weakref__",
+    )  # fmt: skip
+
+    def __init__(
+        self, order=4, *, shape=(), names=None, weights=None, nonfinite="raise", transform=None
+    ):
+        self._order = _checked_order(order)
+        self._shape, self._names = _checked_shape(shape, names)
+        self._weights = _choice("weights", weights, _WEIGHTS)
+        self._nonfinite = _choice("nonfinite", nonfinite, POLICIES)
+        self._transform = _choice("transform", transform, TRANSFORMS)
+        self._form = Form(self._shape, self._names)
+        self._pending = []
+        # Single floats may wait in a list, where nothing has to be known of them at once.
+        self._quick = self._shape == () and weights is None and transform is None
+        self._settled = None
+        self._stream = self._new_stream()
+
+    def _new_stream(self):
+        return Stream(self._order, self._weights, self._form.size, self._nonfinite)
+
+    # -- feeding -----------------------------------------------------------------------------
+
+    def update(self, values, weights=None, *, threads=1):
+        """Take readings in, all of them or, if the call raises, none.
+
+        Parameters
+        ----------
+        values : number, array or iterable
+            A number; an array of any real dtype, layout and shape, read in C order; what pandas,
+            Polars or Arrow give; a list or another finite iterable; an iterator of numbers,
+            consumed in bounded memory.  With ``shape`` a reading of that shape or a chunk
+            ``(n, *shape)``, a data frame, or an iterator of readings.
+        weights : number, array or iterator, optional
+            With ``weights=`` declared: one entry a reading, or one number for all.  A reading of
+            weight zero is left out and not counted.
+        threads : int, default 1
+            Python threads to reduce a large array with; the result is the same to the bit.
+
+        Returns
+        -------
+        Moments
+            The accumulator itself.
+
+        Raises
+        ------
+        NonFiniteError
+            A reading is missing and ``nonfinite="raise"``; ``.position`` says where.
+        ValueError
+            A shape, a weight or an integer beyond 64 bits does not fit.
+        TypeError
+            Text, objects, complex numbers, dates, ``None``.
+
+        Notes
+        -----
+        About 1.3 times the time of ``numpy.sum`` for large arrays, 0.15 microseconds a float.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> ms.Moments().update(range(1, 5)).update(10.0).count
+        5
+        """
+        if type(values) is float and self._quick and weights is None and values - values == 0.0:
+            pending = self._pending
+            pending.append(values)
+            if len(pending) >= _FLUSH:
+                self._flush()
+            return self
+        return self._update(values, weights, threads)
+
+    def _update(self, values, weights, threads):
+        if type(threads) is not int or threads < 1:
+            raise ValueError(f"threads must be an integer of at least 1, got {threads!r}")
+        if (weights is None) != (self._weights is None):
+            if weights is None:
+                raise ValueError(
+                    f"weights are missing: this accumulator has weights={self._weights!r}"
+                )
+            raise ValueError(
+                'weights were given to an accumulator without: make it with weights="frequency" '
+                'or weights="reliability"'
+            )
+        self._flush()
+        single, parts = stretches(values, weights, self._form)
+        stream = self._stream if single else self._stream.copy()
+        done = 0
+        for x, low, w in parts:
+            if self._transform is not None:
+                x, low = transformed(x, low, self._transform, self._nonfinite)
+            try:
+                stream.feed(x, low, w, threads)
+            except NonFiniteError as error:
+                raise self._placed(error, done, values) from None
+            done += len(x)
+        self._stream = stream
+        self._settled = None
+        return self
+
+    def _placed(self, error, done, values):
+        """The error with the position in the whole call, and a word on a transform's domain."""
+        where = error.position
+        if isinstance(where, tuple):
+            row, column = where
+            places = (int(i) for i in np.unravel_index(column, self._shape))
+            position = (row + done, *places)
+        else:
+            position = where + done
+        message = error.args[0].replace(f"reading at {where}", f"reading at {position}", 1)
+        if self._transform is not None:
+            message = message.replace("reading", f"{self._transform} of the reading", 1)
+        return NonFiniteError(message, position)
+
+    def _flush(self):
+        if self._pending:
+            x, _ = pack_numbers(self._pending)
+            self._stream.feed(x, None, None)
+            self._pending = []
+            self._settled = None
+
+    def clear(self):
+        """Forget everything that was fed; returns the accumulator itself."""
+        self._pending = []
+        self._settled = None
+        self._stream = self._new_stream()
+        return self
+
+    # -- combining ---------------------------------------------------------------------------
+
+    def merge(self, other):
+        """Take another accumulator's readings in, as if they had been fed here.
+
+        Parameters
+        ----------
+        other : Moments
+            Of the same order, shape, names, weights and transform; it is not changed.  Where
+            ``nonfinite`` differs, this one's stays.  Parts without names merge with named ones.
+
+        Returns
+        -------
+        Moments
+            The accumulator itself.
+
+        Raises
+        ------
+        MergeError
+            The two do not fit; nothing was changed.
+
+        Notes
+        -----
+        A few microseconds, whatever was fed.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> ms.Moments().update([1.0, 2.0]).merge(ms.Moments().update([3.0, 10.0])).mean()
+        4.0
+        """
+        self._gate(other, "merge")
+        part = other._settle()
+        own = self._settle().tally if self is not other else part.tally
+        if self._form.size is None:
+            if int(own[0]) + int(part.tally[0]) >= _MOST or int(own[1]) + int(part.tally[1]) >= _MOST:
+                raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
+        elif np.any(own[:, :2].astype(float) + part.tally[:, :2] >= 2.0**63):
+            raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
+        self._stream.take_in(part)
+        if self._names is None and other._names is not None:
+            self._names = other._names
+            self._form = Form(self._shape, self._names)
+        self._settled = None
+        return self
+
+    def remove(self, other):
+        """Take a part that is in here out again.
+
+        Parameters
+        ----------
+        other : Moments
+            What goes; it must have been merged or fed in before.
+
+        Returns
+        -------
+        Moments
+            The accumulator itself, settled; the extremes are unknown (nan) from then on.
+
+        Raises
+        ------
+        MergeError
+            The two do not fit, or more would go than there is; nothing was changed.
+
+        Notes
+        -----
+        Not exact: the error is 64 units of the last place of the power sums of the *total*, so that
+        little is known of a small rest.  A rest of one reading has no spread.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> day = ms.Moments().update([1.0, 2.0, 3.0, 10.0])
+        >>> day.remove(ms.Moments().update([3.0, 10.0])).mean()
+        1.5
+        """
+        self._gate(other, "remove")
+        total, part = self._settle(), other._settle()
+        left = total.tally - part.tally
+        if np.any(left[..., :2] < 0):
+            raise MergeError(
+                f"more would be removed than there is: {_counts(part.tally)} readings from "
+                f"{_counts(total.tally)}; nothing was changed"
+            )
+        with np.errstate(all="ignore"):
+            rows = self._removed(total.row, part.row, left)
+        self._replace(rows, left)
+        extremes = self._stream.extremes
+        touched = np.asarray(part.tally[..., 0] > 0)
+        extremes[...] = total.extremes
+        extremes[touched] = np.nan
+        extremes[np.asarray(left[..., 0] == 0)] = (np.inf, -np.inf)
+        return self
+
+    def _removed(self, total, part, left):
+        """The moment vectors that stay, as rows."""
+        a, b = self._vector_of(total), self._vector_of(part)
+        rest = _central.remove(a, b)
+        rows = self._row_of(rest)
+        # Where nothing goes, nothing changes.
+        rows = np.where((part[..., 3] == 0.0)[..., None], total, rows)
+        alone = np.asarray(left[..., 0] == 1)
+        first = 5  # M2 in a row
+        stop = first + self._stream.order - 1
+        rows[..., first:stop] = np.where(alone[..., None], 0.0, rows[..., first:stop])
+        rows = np.where(np.asarray(left[..., 0] == 0)[..., None], 0.0, rows)
+        if np.any((rows[..., 3] <= 0.0) & (left[..., 0] > 0)):
+            raise MergeError(
+                "more weight would be removed than there is; nothing was changed"
+            )
+        return rows
+
+    def affine(self, scale=1.0, offset=0.0):
+        """A new accumulator of ``scale * x + offset``.
+
+        Parameters
+        ----------
+        scale, offset : float
+            A negative scale exchanges the extremes.
+
+        Returns
+        -------
+        Moments
+            Settled; it can be merged and fed.
+
+        Raises
+        ------
+        ValueError
+            The accumulator has a transform (``summary().affine(...)`` exists), or a number is not
+            finite.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> ms.Moments().update([10.0, 20.0]).affine(1.8, 32.0).mean()
+        59.0
+        """
+        if self._transform is not None:
+            raise ValueError(
+                f"affine has no meaning on an accumulator with transform={self._transform!r}: "
+                "summary().affine(...) maps the moments of the transformed readings"
+            )
+        settled = self._settle()
+        changed = affine_view(self._view(), scale, offset)
+        other = self._empty()
+        with np.errstate(all="ignore"):
+            rows = other._row_of(changed.vector)
+            empty = settled.row[..., 3] == 0.0
+            rows = np.where(np.asarray(empty)[..., None], settled.row, rows)
+        other._replace(rows, settled.tally)
+        ends = np.stack([np.asarray(changed.minimum), np.asarray(changed.maximum)], axis=-1)
+        ends = np.where(np.asarray(empty)[..., None], settled.extremes, ends.reshape(settled.extremes.shape))
+        other._stream.extremes[...] = ends + 0.0
+        return other
+
+    def copy(self):
+        """An independent accumulator that continues bit for bit as this one would."""
+        self._flush()
+        other = self._empty()
+        other._stream = self._stream.copy()
+        other._settled = self._settled
+        return other
+
+    def channel(self, which):
+        """The moments of one channel, as an accumulator of its own.
+
+        Parameters
+        ----------
+        which : int, tuple of int, or str
+            A place in ``shape``, or a name.
+
+        Returns
+        -------
+        Moments
+            Settled, of shape ``()``.
+
+        Raises
+        ------
+        KeyError, IndexError, ValueError
+            There is no such channel.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> pair = ms.Moments(names=["inlet", "outlet"]).update([[4.0, 3.0], [6.0, 3.5]])
+        >>> pair.channel("inlet").mean()
+        5.0
+        """
+        place = self._place_of(which)
+        settled = self._settle()
+        other = Moments(
+            self._order,
+            weights=self._weights,
+            nonfinite=self._nonfinite,
+            transform=self._transform,
+        )
+        other._replace(settled.row[place], settled.tally[place])
+        other._stream.extremes[...] = settled.extremes[place]
+        return other
+
+    def _place_of(self, which):
+        if self._shape == ():
+            raise ValueError("this accumulator has no channels: its shape is ()")
+        if isinstance(which, str):
+            if self._names is None or which not in self._names:
+                raise KeyError(f"no channel is named {which!r}; the names are {self._names}")
+            return self._names.index(which)
+        places = which if isinstance(which, tuple) else (which,)
+        places = tuple(checked_degree(i, -(2**62), "channel") for i in places)
+        if len(places) != len(self._shape):
+            raise IndexError(f"a channel of shape {self._shape} has {len(self._shape)} indices, got {which!r}")
+        for place, length in zip(places, self._shape, strict=True):
+            if not -length <= place < length:
+                raise IndexError(f"channel {which!r} is outside shape {self._shape}")
+        places = tuple(i % length for i, length in zip(places, self._shape, strict=True))
+        return int(np.ravel_multi_index(places, self._shape))
+
+    @classmethod
+    def from_central(cls, mean, central, *, count, minimum=np.nan, maximum=np.nan):
+        """An accumulator from moments computed elsewhere; it can be merged and fed.
+
+        Parameters
+        ----------
+        mean : float or array
+            An array gives channels of its shape.
+        central : sequence
+            Central moments (divisor ``count``) from the second on; their number gives the order.
+        count : int
+            Number of readings, at least 1.
+        minimum, maximum : float or array, default nan
+            Extremes, if known.
+
+        Returns
+        -------
+        Moments
+
+        Raises
+        ------
+        ValueError, TypeError
+            Moments are not finite, an even one is negative, or the count is no count.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> ms.Moments.from_central(4.0, [12.5, 45.0], count=4).skewness()
+        1.0182337649086284
+        """
+        count = checked_degree(count, least=1, name="count")
+        if count >= _MOST:
+            raise ValueError(f"count must be below 2**63 - 1, got {count}")
+        mean = _finite_array("mean", mean)
+        moments = [_finite_array(f"central[{i}]", m, mean.shape) for i, m in enumerate(central)]
+        for i, values in enumerate(moments):
+            if i % 2 == 0 and np.any(values < 0.0):
+                raise ValueError(f"central moment {i + 2} must not be negative, got {values}")
+            if count == 1 and np.any(values != 0.0):
+                raise ValueError(f"one reading has no spread, but central moment {i + 2} is {values}")
+        order = len(moments) + 1
+        if order > 16:
+            raise ValueError(f"central must hold at most 15 moments, got {len(moments)}")
+        self = cls(order, shape=mean.shape)
+        flat = mean.reshape(-1) if mean.shape else mean
+        moments = [m.reshape(-1) if mean.shape else m for m in moments]
+        if even(order) != order:
+            moments.append(_guard(moments, flat))
+        with np.errstate(all="ignore"):
+            vector = scaled_vector(flat, moments, float(count))
+            vector = vector._replace(weight=np.broadcast_to(vector.weight, flat.shape))
+            tally = np.zeros_like(self._stream.tally)
+            tally[..., 0] = count
+            self._replace(self._row_of(vector), tally)
+        ends = np.broadcast_to(np.asarray(minimum, float), mean.shape).reshape(flat.shape)
+        self._stream.extremes[..., 0] = ends + 0.0
+        ends = np.broadcast_to(np.asarray(maximum, float), mean.shape).reshape(flat.shape)
+        self._stream.extremes[..., 1] = ends + 0.0
+        return self
+
+    # -- knowing -----------------------------------------------------------------------------
+
+    @property
+    def order(self):
+        """The highest moment kept."""
+        return self._order
+
+    @property
+    def shape(self):
+        """The shape of one reading."""
+        return self._shape
+
+    @property
+    def names(self):
+        """The names of the channels, a tuple, or None."""
+        return self._names
+
+    @property
+    def weights(self):
+        """The kind of weights: None, "frequency" or "reliability"."""
+        return self._weights
+
+    @property
+    def nonfinite(self):
+        """What a missing reading does: "raise", "omit" or "propagate"."""
+        return self._nonfinite
+
+    @property
+    def transform(self):
+        """What is done to readings first: None, "log", "reciprocal" or "abs"."""
+        return self._transform
+
+    @property
+    def count(self):
+        """Readings taken in; for frequencies the sum of the weights.  int, or array of ``shape``."""
+        return self._whole_number(self._settle().tally[..., 0])
+
+    @property
+    def omitted(self):
+        """Readings left out as missing.  int, or array of ``shape``."""
+        return self._whole_number(self._settle().tally[..., 1])
+
+    @property
+    def weight(self):
+        """The sum of the weights (without weights: the count).  float, or array of ``shape``."""
+        view = self._view()
+        with np.errstate(all="ignore"):
+            return self._read(_central.shift(view.vector.weight, view.vector.weight_scale), view)
+
+    @property
+    def effective_count(self):
+        """How many readings of equal weight would tell as much (Kish): W**2 / V2 for reliability
+        weights, else the weight.  float, or array of ``shape``; 0 when empty."""
+        view = self._view()
+        if self._weights != "reliability":
+            return self.weight
+        with np.errstate(all="ignore"):
+            v = view.vector
+            value = v.weight * v.weight / np.where(v.weight > 0.0, v.powers[0], 1.0)
+            return self._read(value, view)
+
+    def summary(self):
+        """The immutable summary of what has been fed so far.
+
+        Examples
+        --------
+        >>> import momentstream as ms
+        >>> print(ms.Moments().update([1.0, 2.0, 3.0, 10.0]).summary())
+        count            4
+        mean             4
+        variance      12.5
+        std        3.53553
+        skewness   1.01823
+        kurtosis   -0.7696
+        minimum          1
+        maximum         10
+        """
+        return Summary._make(
+            self._view(),
+            count=self.count,
+            omitted=self.omitted,
+            effective=self.effective_count,
+            names=self._names,
+        )
+
+    def __repr__(self):
+        fields = [("order", str(self._order))]
+        if self._shape:
+            fields.append(("shape", str(self._shape)))
+            count = self.count
+            fields.append(("count", _span(count)))
+        else:
+            fields.append(("count", self.count))
+        for name in ("weights", "transform"):
+            if getattr(self, name) is not None:
+                fields.append((name, repr(getattr(self, name))))
+        omitted = self.omitted
+        if np.any(omitted):
+            fields.append(("omitted", _span(omitted) if self._shape else omitted))
+        if not self._shape:
+            for name, least in (("mean", 1), ("std", 2), ("skewness", 3), ("kurtosis", 4)):
+                if self._order >= least:
+                    fields.append((name, getattr(self, name)()))
+        return one_line("Moments", fields)
+
+    def _repr_html_(self):
+        return self.summary()._repr_html_()
+
+    # -- state -------------------------------------------------------------------------------
+
+    def _settle(self):
+        self._flush()
+        if self._settled is None:
+            self._settled = self._stream.settle()
+        return self._settled
+
+    def _view(self):
+        settled = self._settle()
+        shape = self._shape
+        tally = settled.tally.reshape((*shape, 4))
+        extremes = settled.extremes.reshape((*shape, 2))
+        # Empty is nan, as unknown is.
+        seen = np.isfinite(extremes) | (tally[..., :1] > 0)
+        ends = np.where(seen, extremes, np.nan)
+        readings = tally[..., 0]
+        return View(
+            self._order,
+            shape,
+            self._weights,
+            readings,
+            self._vector_of(settled.row, shape),
+            ends[..., 0],
+            ends[..., 1],
+        )
+
+    def _vector_of(self, row, shape=None):
+        """Rows of fields as a ``MomentVector``; ``shape`` folds the channels."""
+        lead = row.shape[:-1] if shape is None else shape
+        field = np.moveaxis(row, -1, 0).reshape((row.shape[-1], *lead))
+        order = self._stream.order
+        powers, weight_scale = None, 0.0
+        if self._weights is not None:
+            weight_scale, powers = field[4 + order], field[5 + order : 8 + order]
+        return _central.MomentVector(
+            field[3], field[0], field[1], field[2], field[5 : 4 + order], weight_scale, powers
+        )
+
+    def _row_of(self, vector):
+        """A ``MomentVector`` (channels flat) as rows of fields, in the units of its content."""
+        stream = self._stream
+        lead = () if self._form.size is None else (self._form.size,)
+        row = np.zeros((*lead, stream.fields))
+
+        def flat(values):
+            return np.asarray(values, float).reshape(lead)
+
+        row[..., 0], row[..., 1] = flat(vector.mean), flat(vector.rest)
+        row[..., 2], row[..., 3] = flat(vector.scale), flat(vector.weight)
+        for k, sums in enumerate(vector.sums, start=2):
+            row[..., 3 + k] = flat(sums)
+        if self._weights is not None:
+            row[..., 4 + stream.order] = flat(np.broadcast_to(vector.weight_scale, lead))
+            for j, power in enumerate(vector.powers):
+                row[..., 5 + stream.order + j] = flat(power)
+        for one in row.reshape(-1, stream.fields):
+            _vector.settle_units(one, stream.order, stream.weighted)
+        return row
+
+    def _empty(self):
+        return Moments(
+            self._order,
+            shape=self._shape,
+            names=self._names,
+            weights=self._weights,
+            nonfinite=self._nonfinite,
+            transform=self._transform,
+        )
+
+    def _replace(self, rows, tally):
+        """Become a settled state of these vectors and counts."""
+        self._pending = []
+        self._settled = None
+        self._stream = self._new_stream()
+        self._stream.table[..., 0, :] = rows
+        self._stream.tally[...] = tally
+
+    def _gate(self, other, verb):
+        self._same_type(other)
+        for name in ("order", "shape", "weights", "transform"):
+            mine, theirs = getattr(self, name), getattr(other, name)
+            if mine != theirs:
+                raise MergeError(
+                    f"{verb} needs equal {name}: this one has {name}={mine!r}, the other "
+                    f"{name}={theirs!r}; make both with the same {name}. Nothing was changed"
+                )
+        if self._names is not None and other._names is not None and self._names != other._names:
+            raise MergeError(
+                f"{verb} needs equal names: this one has {self._names}, the other {other._names}. "
+                "Nothing was changed"
+            )
+
+    def _whole_number(self, values):
+        if self._shape == ():
+            return int(values)
+        return values.reshape(self._shape).copy()
+
+    # -- bytes -------------------------------------------------------------------------------
+
+    def _write(self, writer, resume):
+        self._flush()
+        writer.pack(
+            "6B",
+            self._order,
+            _WEIGHTS.index(self._weights),
+            POLICIES.index(self._nonfinite),
+            TRANSFORMS.index(self._transform),
+            len(self._shape),
+            self._names is not None,
+        )
+        writer.pack(f"{len(self._shape)}Q", *self._shape)
+        for name in self._names or ():
+            writer.text(name)
+        stream = self._stream
+        state = stream if resume else self._settle()
+        writer.integers(state.tally[..., :2])
+        writer.doubles(state.extremes)
+        writer.doubles(_without_first(stream.table[..., 0, :] if resume else state.row))
+        if resume:
+            fill = stream.fill
+            low = stream.low is not None and bool(stream.low[:fill].any())
+            writer.pack("QIB", stream.blocks, fill, low)
+            for level in range(stream.blocks.bit_length()):
+                if stream.blocks >> level & 1:
+                    writer.doubles(_without_first(stream.table[..., 6 - 1 + level, :]))
+            if fill:
+                writer.doubles(stream.buffer[:fill])
+                if low:
+                    writer.doubles(stream.low[:fill])
+                if stream.weighted:
+                    writer.doubles(stream.w[:fill])
+
+    @classmethod
+    def _from_payload(cls, reader, flags):
+        order, weights, policy, transform, axes, named = reader.unpack("6B")
+        if not (1 <= order <= 16 and weights < 3 and policy < 3 and transform < 4 and named < 2):
+            raise StateError("state holds settings that do not exist")
+        shape = reader.unpack(f"{axes}Q") if axes else ()
+        channels = 1
+        for length in shape:
+            channels *= length
+        if channels < 1 or axes > 32:
+            raise StateError(f"state holds an impossible shape {shape}")
+        lead = (channels,) if axes else ()
+        # Everything below has a length in the bytes: nothing is made before it is read.
+        names = tuple(reader.text() for _ in range(channels)) if named and axes == 1 else None
+        tally = reader.integers((*lead, 2))
+        extremes = reader.doubles((*lead, 2))
+        fields = even(order) + 3 + (4 if weights else 0)
+        rows = _checked_rows(reader.doubles((*lead, fields)), even(order), bool(weights))
+        try:
+            self = cls(
+                order,
+                shape=shape if names is None else (),
+                names=names,
+                weights=_WEIGHTS[weights],
+                nonfinite=POLICIES[policy],
+                transform=TRANSFORMS[transform],
+            )
+        except (TypeError, ValueError) as error:
+            raise StateError(f"state holds impossible settings: {error}") from None
+        if np.any(tally < 0) or np.any(tally == _MOST):
+            raise StateError("state holds a negative or impossible count")
+        stream = self._stream
+        stream.tally[..., :2] = tally
+        stream.extremes[...] = extremes
+        stream.table[..., 0, :] = rows
+        if flags & CONTINUED:
+            self._read_working_state(reader)
+        elif np.any((tally[..., 0] > 0) != (rows[..., 3] > 0.0)):
+            raise StateError("state holds readings without weight, or weight without readings")
+        return self
+
+    def _read_working_state(self, reader):
+        stream = self._stream
+        blocks, fill, low = reader.unpack("QIB")
+        if blocks >= 1 << 50 or fill >= stream.rows or low > 1:
+            raise StateError("state holds an impossible block count")
+        lead = () if stream.channels is None else (stream.channels,)
+        table = np.zeros((*lead, 5 + max(1, blocks.bit_length()), stream.fields))
+        table[..., 0, :] = stream.table[..., 0, :]
+        for level in range(blocks.bit_length()):
+            if blocks >> level & 1:
+                rows = reader.doubles((*lead, stream.fields - 1))
+                table[..., 5 + level, :] = _checked_rows(rows, stream.order, stream.weighted)
+        stream.table, stream.blocks = table, blocks
+        if fill:
+            readings = reader.doubles((fill, *lead))
+            rest = reader.doubles((fill, *lead)) if low else None
+            w = reader.doubles((fill,)) if stream.weighted else None
+            try:
+                stream.feed(readings, rest, w)
+            except ValueError as error:
+                raise StateError(f"state holds readings that cannot be: {error}") from None
+            if rest is not None and not np.all(np.isfinite(rest)):
+                raise StateError("state holds readings that cannot be")
+
+
+def _without_first(rows):
+    """A table's row without the first power sum, which is always zero."""
+    return np.delete(rows, 4, axis=-1)
+
+
+def _checked_rows(rows, order, weighted):
+    """Moment vectors from bytes: the numbers kernels rely on are what they must be."""
+    rows = np.insert(rows, 4, 0.0, axis=-1)
+    scales = [rows[..., 2]] + ([rows[..., 4 + order]] if weighted else [])
+    for scale in scales:
+        if np.any(scale != np.rint(scale)) or np.any(np.abs(scale) > _LARGEST_SCALE):
+            raise StateError("state holds a scale that cannot be")
+    weight = rows[..., 3]
+    good = (weight >= 0.0) & (weight < np.inf)
+    even_sums = rows[..., 5 : 4 + order : 2]
+    good &= ~np.any(even_sums < 0.0, axis=-1)
+    finite = np.isfinite(rows[..., 0])
+    good &= ~finite | (np.all(np.isfinite(rows), axis=-1))
+    if weighted:
+        good &= np.all(rows[..., 5 + order :] >= 0.0, axis=-1)
+    if not np.all(good):
+        raise StateError("state holds moments that cannot be")
+    return rows
+
+
+def _checked_order(order):
+    if isinstance(order, bool) or not hasattr(order, "__index__"):
+        raise TypeError(f"order must be an integer from 1 to 16, got {order!r}")
+    order = order.__index__()
+    if not 1 <= order <= 16:
+        raise ValueError(f"order must be an integer from 1 to 16, got {order}")
+    return order
+
+
+def _checked_shape(shape, names):
+    if names is not None:
+        if isinstance(names, str):
+            raise TypeError(f"names must be a sequence of str, got the str {names!r}")
+        names = tuple(names)
+        for name in names:
+            if not isinstance(name, str):
+                raise TypeError(f"names must be str, got {name!r}")
+        if len(set(names)) != len(names):
+            raise ValueError(f"names must differ from each other, got {names}")
+    if hasattr(shape, "__index__") and not isinstance(shape, bool):
+        shape = (shape,)
+    if not isinstance(shape, (tuple, list)):
+        raise TypeError(f"shape must be an integer or a tuple of integers, got {shape!r}")
+    shape = tuple(checked_degree(length, 1, "shape") for length in shape)
+    if names is not None:
+        if shape and shape != (len(names),):
+            raise ValueError(f"shape {shape} does not fit {len(names)} names")
+        if not names:
+            raise ValueError("names must name at least one channel")
+        shape = (len(names),)
+    return shape, names
+
+
+def _choice(name, value, choices):
+    if not (value is None or isinstance(value, str)):
+        raise TypeError(f"{name} must be one of {choices}, got {value!r}")
+    if value not in choices:
+        raise ValueError(f"{name} must be one of {choices}, got {value!r}")
+    return value
+
+
+def _finite_array(name, value, shape=None):
+    try:
+        array = np.asarray(value, dtype=np.float64)
+    except (TypeError, ValueError):
+        raise TypeError(f"{name} must be a number or an array of numbers, got {value!r}") from None
+    if not np.all(np.isfinite(array)):
+        raise ValueError(f"{name} must be finite, got {value!r}")
+    if shape is not None and array.shape != shape:
+        raise ValueError(f"{name} must have the shape of mean, {shape}, got {array.shape}")
+    return array
+
+
+def _guard(moments, like):
+    """An even moment above an odd order: it only guards the scale, and is never read."""
+    if not moments:
+        return np.zeros_like(like)
+    second = moments[0]
+    return second ** ((len(moments) + 2) / 2)
+
+
+def _counts(tally):
+    return int(tally[0]) if tally.ndim == 1 else tally[:, 0].tolist()
+
+
+def _span(values):
+    least, most = int(np.min(values)), int(np.max(values))
+    return f"{least:,}" if least == most else f"{least:,}..{most:,}"
+
+
+

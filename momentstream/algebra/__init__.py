@@ -1,0 +1,1 @@
+"""Pure formulas on moments, NumPy only: each is stated here once."""

@@ -1,0 +1,68 @@
+"""How kernels are compiled: one decorator, and the one hint LLVM needs.
+
+With ``NUMBA_DISABLE_JIT=1`` every kernel is plain Python, and the hint does nothing.
+"""
+
+import numba
+from numba.core import types
+from numba.extending import intrinsic
+
+# Sums may be reordered and fused by the vectoriser; NaN and infinity keep their meaning.
+REORDER = {"reassoc", "contract", "nsz"}
+
+
+def compiled(function=None, **options):
+    """``numba.njit`` without the interpreter lock, cached on disk where a folder is writable."""
+    if function is None:
+        return lambda function: compiled(function, **options)
+    options.setdefault("error_model", "numpy")
+    try:
+        return numba.njit(nogil=True, cache=True, **options)(function)
+    except RuntimeError:  # Numba found no folder it can write to: a read-only install without a home
+        return numba.njit(nogil=True, **options)(function)
+
+
+def internal(function=None, **options):
+    """``compiled`` for functions that only kernels call: no entry from Python, no file of their own."""
+    if function is None:
+        return lambda function: internal(function, **options)
+    options.setdefault("error_model", "numpy")
+    return numba.njit(
+        nogil=True, no_cpython_wrapper=True, no_cfunc_wrapper=True, **options
+    )(function)
+
+
+@intrinsic
+def _keep_apart(typing_context):
+    def generate(context, builder, signature, arguments):
+        builder.function.attributes.add("noinline")
+        return context.get_dummy_value()
+
+    return types.void(), generate
+
+
+def _selection(comparison):
+    @intrinsic
+    def select(typing_context, a, b):
+        def generate(context, builder, signature, arguments):
+            flags = ("nnan", "nsz")
+            first = builder.fcmp_ordered(comparison, *arguments, flags=flags)
+            return builder.select(first, *arguments, flags=flags)
+
+        return types.float64(types.float64, types.float64), generate
+
+    return select
+
+
+if numba.config.DISABLE_JIT:
+
+    def keep_apart():
+        """Nothing, in plain Python."""
+
+    lesser, greater = min, max
+else:
+    # Extremes that vectorise: they say nothing where a NaN takes part (the sums show that one).
+    lesser, greater = _selection("<"), _selection(">")
+    # The power sums must be the same machine code wherever they are called from: inlined copies
+    # could be vectorised in another order, and equal readings would give unequal bits.
+    keep_apart = _keep_apart

@@ -1,0 +1,1 @@
+"""Parts from many places: combining them, and files that survive a crash."""

@@ -1,0 +1,1 @@
+"""What is read off moments: the shared statistics, and the immutable summary."""
