@@ -269,18 +269,22 @@ class Moments(Accumulator, Statistics):
         """
         self._gate(other, "merge")
         part = other._settle()
-        own = self._settle().tally if self is not other else part.tally
-        if self._form.size is None:
-            if int(own[0]) + int(part.tally[0]) >= _MOST or int(own[1]) + int(part.tally[1]) >= _MOST:
-                raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
-        elif np.any(own[:, :2].astype(float) + part.tally[:, :2] >= 2.0**63):
-            raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
+        self._check_room(part)
         self._stream.take_in(part)
         if self._names is None and other._names is not None:
             self._names = other._names
             self._form = Form(self._shape, self._names)
         self._settled = None
         return self
+
+    def _check_room(self, part):
+        """Refuse a merge whose counts no 64-bit integer holds."""
+        most = int(part.tally.max())
+        if most < 2**61 and self._weights != "frequency" and int(self._stream.tally.max()) < 2**61:
+            return
+        total = self._settle().tally.astype(object) + part.tally
+        if total.max() >= _MOST:
+            raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
 
     def remove(self, other):
         """Take a part that is in here out again.
@@ -631,6 +635,11 @@ class Moments(Accumulator, Statistics):
 
     def _view(self):
         settled = self._settle()
+        if settled.view is None:
+            settled.view = self._view_of(settled)
+        return settled.view
+
+    def _view_of(self, settled):
         shape = self._shape
         tally = settled.tally.reshape((*shape, 4))
         extremes = settled.extremes.reshape((*shape, 2))

@@ -39,12 +39,13 @@ def block_rows(channels):
 class Settled:
     """Everything folded into one moment vector: ``row`` (channels, fields) or (fields,)."""
 
-    __slots__ = ("row", "tally", "extremes")
+    __slots__ = ("row", "tally", "extremes", "view")
 
     def __init__(self, row, tally, extremes):
         self.row = row
         self.tally = tally
         self.extremes = extremes
+        self.view = None  # what statistics read, once somebody asked
 
 
 class Stream:
@@ -347,21 +348,27 @@ class Stream:
     def take_in(self, part):
         """Take a settled part in, beside the own stream."""
         base = self.table[..., 0, :]
-        if np.any(part.row[..., 3]):
+        if self.channels is None:
+            _vector.combine_pair(base, part.row, self.order, self.weighted)
+        elif np.any(part.row[..., 3]):
             base = base.copy()
-            combine = (
-                _vector.combine_pair if self.channels is None else _channels.combine_channel_pairs
-            )
-            combine(base, part.row, self.order, self.weighted)
+            _channels.combine_channel_pairs(base, part.row, self.order, self.weighted)
             self.table[..., 0, :] = base
-        self.tally[..., :2] += part.tally[..., :2]
+        self.tally += part.tally
         extend(self.extremes, part.extremes)
 
 
 def extend(extremes, more):
     """Take extremes into extremes; a NaN (unknown, or propagated) stays."""
-    np.minimum(extremes[..., 0], more[..., 0], out=extremes[..., 0])
-    np.maximum(extremes[..., 1], more[..., 1], out=extremes[..., 1])
+    if extremes.ndim > 1:
+        np.minimum(extremes[..., 0], more[..., 0], out=extremes[..., 0])
+        np.maximum(extremes[..., 1], more[..., 1], out=extremes[..., 1])
+        return
+    (least, most), (other_least, other_most) = extremes.tolist(), more.tolist()
+    if other_least < least or other_least != other_least:
+        extremes[0] = other_least
+    if other_most > most or other_most != other_most:
+        extremes[1] = other_most
 
 
 def single_precision_agrees(order):

@@ -15,7 +15,7 @@ import numpy as np
 from numba.core import types
 from numba.extending import overload
 
-from .compiling import REORDER, compiled, internal, keep_apart
+from .compiling import REORDER, compiled, copy_eight, internal, keep_apart
 from .sums import (
     LEAST,
     LIGHTEST,
@@ -23,6 +23,7 @@ from .sums import (
     PIVOT,
     POWERS,
     ROOM,
+    STRETCH,
     power_sums,
     weighted_power_sums,
 )
@@ -134,12 +135,27 @@ def write_deviations(x, low, scale, pivot, pivot_rest, out):
             out[i] = (x[i] * first * second - pivot) + (low[i] * first * second - pivot_rest)
 
 
-@internal(fastmath=REORDER)
+@internal
 def _mean_distance(head, origin):
+    # Eight sums side by side, in an order the compiler may not change: it would take the origin
+    # out of the sum, and a pivot found from scaled readings would differ in its last bit.
     keep_apart()
-    total = 0.0
-    for i in range(head.size):
+    t0 = t1 = t2 = t3 = t4 = t5 = t6 = t7 = 0.0
+    i = 0
+    while i + 8 <= head.size:
+        t0 += head[i] - origin
+        t1 += head[i + 1] - origin
+        t2 += head[i + 2] - origin
+        t3 += head[i + 3] - origin
+        t4 += head[i + 4] - origin
+        t5 += head[i + 5] - origin
+        t6 += head[i + 6] - origin
+        t7 += head[i + 7] - origin
+        i += 8
+    total = ((t0 + t1) + (t2 + t3)) + ((t4 + t5) + (t6 + t7))
+    while i < head.size:
         total += head[i] - origin
+        i += 1
     return total / head.size
 
 
@@ -468,39 +484,72 @@ def add_count(tally, place, count):
 def squeeze(x, low, w, kept, kept_low, kept_w):
     """Copy the readings that are finite and of weight; returns how many."""
     keep_apart()
-    n = begin = ZERO
-    if w is None:
-        # Clean stretches are looked for 64 at a time, and copied in one go.
-        for start in range(0, x.size, 64):
-            part = x[start : start + 64]
-            if not all_finite(part):
-                n = _copy_run(x, low, begin, start, kept, kept_low, n)
-                begin = start + part.size
-                for i in range(start, begin):
-                    kept[n] = x[i]
-                    if low is not None:
-                        kept_low[n] = low[i]
-                    n += is_finite(x[i])
-        return _copy_run(x, low, begin, x.size, kept, kept_low, n)
-    for i in range(x.size):
+    n = i = ZERO
+    if w is None and low is None:
+        while i + 8 <= x.size:
+            if copy_eight(x, i, kept, n):
+                n += 8
+            else:
+                for j in range(8):
+                    kept[n] = x[i + j]
+                    n += is_finite(x[i + j])
+            i += 8
+    while i < x.size:
+        keep = is_finite(x[i])
         kept[n] = x[i]
-        kept_w[n] = w[i]
         if low is not None:
             kept_low[n] = low[i]
-        n += is_finite(x[i]) and w[i] > 0.0
+        if w is not None:
+            kept_w[n] = w[i]
+            keep = keep and w[i] > 0.0
+        n += keep
+        i += 1
     return n
 
 
 @internal
-def _copy_run(x, low, start, stop, kept, kept_low, n):
-    source = x[start:stop]
-    target = kept[n : n + source.size]
-    for i in range(source.size):
-        target[i] = source[i]
-    if low is not None:
-        for i in range(source.size):
-            kept_low[n + i] = low[start + i]
-    return n + source.size
+def sweep_gapped(x, order, room, row, whole_row):
+    """``sweep`` of the finite readings alone, a stretch of them at a time; returns how many.
+
+    The bits are those of ``squeeze`` and ``sweep``, which would pass the block through the second
+    cache level once more.  ``whole_row`` of ``room`` receives the sums.
+    """
+    keep_apart()
+    kept = np.empty(STRETCH + 8)
+    held = n = i = ZERO
+    pivot = 0.0
+    for k in range(order + 1):
+        room[whole_row, k] = 0.0
+    room[whole_row, LEAST], room[whole_row, MOST] = np.inf, -np.inf
+    while i < x.size or held > 0:
+        while held < STRETCH and i + 8 <= x.size:
+            if copy_eight(x, i, kept, held):
+                held += 8
+            else:
+                for j in range(8):
+                    kept[held] = x[i + j]
+                    held += is_finite(x[i + j])
+            i += 8
+        while held < STRETCH and i < x.size:
+            kept[held] = x[i]
+            held += is_finite(x[i])
+            i += 1
+        part = kept[: min(held, STRETCH)]
+        if part.size == 0:
+            break
+        if n == 0:
+            pivot, _ = find_pivot(part, None, ZERO, order, None)
+        power_sums(part, pivot, order, room, row)
+        for k in range(order + 1):
+            room[whole_row, k] += room[row, k]
+        room[whole_row, LEAST] = min(room[whole_row, LEAST], room[row, LEAST])
+        room[whole_row, MOST] = max(room[whole_row, MOST], room[row, MOST])
+        n += part.size
+        for j in range(part.size, held):
+            kept[j - part.size] = kept[j]
+        held -= part.size
+    room[whole_row, PIVOT] = pivot
+    return n
 
 
 @internal
@@ -531,6 +580,15 @@ def _take_gapped(x, low, w, policy, whole, order, table, tally, extremes, room, 
     if w is not None:
         if not check_weights(w, whole, tally):
             return False
+    if w is None and low is None and by_rows is None and policy == OMIT:
+        found = np.empty((2, ROOM))
+        n = sweep_gapped(x, order, found, ZERO, ZERO + 1)
+        if n > 0 and settled_by_sweep(None, order, found, ZERO + 1):
+            write_vector(None, order, table, found, ZERO + 1, 0.0, ZERO, ZERO)
+            add_count(tally, COUNT, n)
+            add_count(tally, OMITTED, x.size - n)
+            extend(extremes, found[1, LEAST], found[1, MOST])
+            return True
     kept = np.empty(x.size)
     kept_low = room_for(low, x.size)
     kept_w = room_for(w, x.size)

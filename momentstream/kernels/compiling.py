@@ -4,6 +4,7 @@ With ``NUMBA_DISABLE_JIT=1`` every kernel is plain Python, and the hint does not
 """
 
 import numba
+from llvmlite import ir
 from numba.core import types
 from numba.extending import intrinsic
 
@@ -41,6 +42,25 @@ def _keep_apart(typing_context):
     return types.void(), generate
 
 
+@intrinsic
+def _copy_eight(typing_context, source, place, target, to):
+    def generate(context, builder, signature, arguments):
+        double, eight = ir.DoubleType(), ir.VectorType(ir.DoubleType(), 8)
+
+        def pointer(array, index):
+            data = context.make_array(signature.args[array])(context, builder, arguments[array]).data
+            return builder.bitcast(builder.gep(data, [arguments[index]]), eight.as_pointer())
+
+        values = builder.load(pointer(0, 1), align=8)
+        builder.store(values, pointer(2, 3), align=8)
+        zeros = ir.Constant(eight, [ir.Constant(double, 0.0)] * 8)
+        finite = builder.fcmp_ordered("==", builder.fsub(values, values), zeros)
+        byte = builder.bitcast(finite, ir.IntType(8))
+        return builder.icmp_unsigned("==", byte, ir.IntType(8)(255))
+
+    return types.boolean(source, types.intp, target, types.intp), generate
+
+
 def _selection(comparison):
     @intrinsic
     def select(typing_context, a, b):
@@ -59,8 +79,15 @@ if numba.config.DISABLE_JIT:
     def keep_apart():
         """Nothing, in plain Python."""
 
+    def copy_eight(source, place, target, to):
+        """Copy eight readings; whether all are finite."""
+        eight = source[place : place + 8]
+        target[to : to + 8] = eight
+        return all(value - value == 0.0 for value in eight.tolist())
+
     lesser, greater = min, max
 else:
+    copy_eight = _copy_eight
     # Extremes that vectorise: they say nothing where a NaN takes part (the sums show that one).
     lesser, greater = _selection("<"), _selection(">")
     # The power sums must be the same machine code wherever they are called from: inlined copies
