@@ -10,43 +10,54 @@ Examples
 (4.0, 12.5, 1.0182337649086284)
 """
 
+from importlib import import_module
 from typing import TYPE_CHECKING
 
-from .accumulators.moments import Moments
-from .errors import MergeError, MomentstreamError, NonFiniteError, OrderError, StateError
-from .shards.combining import combine
-from .shards.files import from_bytes, load, save
-from .statistics.summary import Summary
-
 if TYPE_CHECKING:
-    from . import kernels
+    from . import kernels as kernels
+    from .accumulators.moments import Moments as Moments
+    from .errors import MergeError as MergeError
+    from .errors import MomentstreamError as MomentstreamError
+    from .errors import NonFiniteError as NonFiniteError
+    from .errors import OrderError as OrderError
+    from .errors import StateError as StateError
+    from .shards.combining import combine as combine
+    from .shards.files import from_bytes as from_bytes
+    from .shards.files import load as load
+    from .shards.files import save as save
+    from .statistics.summary import Summary as Summary
 
 __version__ = "0.1.0"
 
-__all__ = [
-    "MergeError",
-    "Moments",
-    "MomentstreamError",
-    "NonFiniteError",
-    "OrderError",
-    "StateError",
-    "Summary",
-    "__version__",
-    "combine",
-    "from_bytes",
-    "kernels",
-    "load",
-    "save",
-]
+# Where each name lives; a name is fetched when it is first asked for, so that importing the
+# package costs next to nothing, and the compiler comes with the first numeric work.
+_HOMES = {
+    "MergeError": ".errors",
+    "Moments": ".accumulators.moments",
+    "MomentstreamError": ".errors",
+    "NonFiniteError": ".errors",
+    "OrderError": ".errors",
+    "StateError": ".errors",
+    "Summary": ".statistics.summary",
+    "combine": ".shards.combining",
+    "from_bytes": ".shards.files",
+    "load": ".shards.files",
+    "save": ".shards.files",
+}
+
+__all__ = [*_HOMES, "__version__", "kernels"]
 
 
 def __getattr__(name):
-    # The kernels bring the compiler with them, so they come when they are asked for.
     if name == "kernels":
-        from importlib import import_module
-
         return import_module(".kernels", __name__)
-    raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    try:
+        home = _HOMES[name]
+    except KeyError:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}") from None
+    value = getattr(import_module(home, __name__), name)
+    globals()[name] = value
+    return value
 
 
 def __dir__():

@@ -134,7 +134,7 @@ class _Lent:
 class Form:
     """What an accumulator takes: the shape of a reading, its channels and their names."""
 
-    __slots__ = ("shape", "size", "names")
+    __slots__ = ("names", "shape", "size")
 
     def __init__(self, shape, names):
         self.shape = shape
@@ -237,10 +237,12 @@ def _array_stretches(data, mask, weights, form):
     w = _weights_of(weights, n)
     if mask is not None and not mask.any():
         mask = None
-    plain = data.dtype == np.float64 or (data.dtype == np.float32 and not form.shape and w is None)
-    if plain and mask is None and data.flags.c_contiguous and data.flags.aligned:
-        if data.dtype.isnative:
-            return True, iter([(form.fold(writable(data).reshape(-1)), None, w)])
+    as_it_is = data.dtype == np.float64 or (
+        data.dtype == np.float32 and not form.shape and w is None
+    )
+    flags = data.flags
+    if as_it_is and mask is None and flags.c_contiguous and flags.aligned and data.dtype.isnative:
+        return True, iter([(form.fold(writable(data).reshape(-1)), None, w)])
     if n <= CHUNK and data.size <= STRETCH:
         x, low = _converted(np.ascontiguousarray(data).reshape(-1), mask)
         return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])

@@ -1,55 +1,22 @@
-"""Moments of a stream of readings, or of many streams side by side.
-
-Payload of a frame of kind 1 (see ``momentstream.codec`` for the frame; p is the order, made even;
-C the number of channels, 1 where the shape is empty; F = p + 3 doubles a vector, + 4 with weights):
-
-==================  ===============================================================================
-type                meaning
-==================  ===============================================================================
-5 x uint8           order; weights 0 none, 1 frequency, 2 reliability; nonfinite 0 raise, 1 omit,
-                    2 propagate; transform 0 none, 1 log, 2 reciprocal, 3 abs; number of axes
-uint8               1 if names follow
-axes x uint64       the shape
-text x C            the names, if any
-C x 2 int64         readings counted, readings omitted
-C x 2 doubles       least and greatest reading (+inf, -inf when empty, NaN when unknown)
-C x F doubles       the moment vector: mean, its rest, scale s, W, M2 .. Mp and, with weights, weight
-                    scale t, V2, V3, V4.  The mean is (mean + rest) * 2**s, M_k stands in units of
-                    2**(k * s + t), W of 2**t, V_j of 2**(j * t)
-==================  ===============================================================================
-
-A working state (flag 1) has instead of the last the base's vector, and then:
-
-==================  ===============================================================================
-uint64              finished blocks n; the tree has a vector for every bit set in n
-uint32              f, the rows of the unfinished block
-uint8               1 if second parts of wide integers follow
-C x F doubles       a vector for every bit set in n, from the lowest up
-f x C doubles       the readings of the unfinished block; second parts likewise, if any
-f doubles           their weights, with weights
-==================  ===============================================================================
-
-There the counts and extremes are those of base and finished blocks.
-"""
+"""Moments of a stream of readings, or of many streams side by side."""
 
 import numpy as np
 
 from ..algebra import central as _central
 from ..codec import CONTINUED, register
 from ..display.text import one_line
-from ..errors import MergeError, NonFiniteError, StateError
+from ..errors import MergeError, NonFiniteError
 from ..statistics.readout import Statistics, View, checked_degree
 from ..statistics.summary import Summary, affine_view, scaled_vector
 from .base import Accumulator
 from .door import Form, pack_numbers, stretches
-from .lazy import vector as _vector
+from .moments_payload import MOST_COUNTED, WEIGHTS, read_payload, write_payload
+from .rows import removed_rows, rows_of, vector_of
+from .settings import checked_order, checked_shape, choice, finite_array
 from .stream import POLICIES, Stream, even
 from .transforms import TRANSFORMS, transformed
 
-_WEIGHTS = (None, "frequency", "reliability")
 _FLUSH = 1024
-_LARGEST_SCALE = 4096
-_MOST = 2**63 - 1
 
 
 @register(1)
@@ -108,18 +75,28 @@ class Moments(Accumulator, Statistics):
     """
 
     __slots__ = (
-        "_order", "_shape", "_names", "_weights", "_nonfinite", "_transform",
-        "_form", "_stream", "_pending", "_quick", "_settled", "__weakref__",
+        "__weakref__",
+        "_form",
+        "_names",
+        "_nonfinite",
+        "_order",
+        "_pending",
+        "_quick",
+        "_settled",
+        "_shape",
+        "_stream",
+        "_transform",
+        "_weights",
     )  # fmt: skip
 
     def __init__(
         self, order=4, *, shape=(), names=None, weights=None, nonfinite="raise", transform=None
     ):
-        self._order = _checked_order(order)
-        self._shape, self._names = _checked_shape(shape, names)
-        self._weights = _choice("weights", weights, _WEIGHTS)
-        self._nonfinite = _choice("nonfinite", nonfinite, POLICIES)
-        self._transform = _choice("transform", transform, TRANSFORMS)
+        self._order = checked_order(order)
+        self._shape, self._names = checked_shape(shape, names)
+        self._weights = choice("weights", weights, WEIGHTS)
+        self._nonfinite = choice("nonfinite", nonfinite, POLICIES)
+        self._transform = choice("transform", transform, TRANSFORMS)
         self._form = Form(self._shape, self._names)
         self._pending = []
         # Single floats may wait in a list, where nothing has to be known of them at once.
@@ -283,7 +260,7 @@ class Moments(Accumulator, Statistics):
         if most < 2**61 and self._weights != "frequency" and int(self._stream.tally.max()) < 2**61:
             return
         total = self._settle().tally.astype(object) + part.tally
-        if total.max() >= _MOST:
+        if total.max() >= MOST_COUNTED:
             raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
 
     def remove(self, other):
@@ -325,7 +302,7 @@ class Moments(Accumulator, Statistics):
                 f"{_counts(total.tally)}; nothing was changed"
             )
         with np.errstate(all="ignore"):
-            rows = self._removed(total.row, part.row, left)
+            rows = removed_rows(total.row, part.row, left, self._stream)
         self._replace(rows, left)
         extremes = self._stream.extremes
         touched = np.asarray(part.tally[..., 0] > 0)
@@ -333,24 +310,6 @@ class Moments(Accumulator, Statistics):
         extremes[touched] = np.nan
         extremes[np.asarray(left[..., 0] == 0)] = (np.inf, -np.inf)
         return self
-
-    def _removed(self, total, part, left):
-        """The moment vectors that stay, as rows."""
-        a, b = self._vector_of(total), self._vector_of(part)
-        rest = _central.remove(a, b)
-        rows = self._row_of(rest)
-        # Where nothing goes, nothing changes.
-        rows = np.where((part[..., 3] == 0.0)[..., None], total, rows)
-        alone = np.asarray(left[..., 0] == 1)
-        first = 5  # M2 in a row
-        stop = first + self._stream.order - 1
-        rows[..., first:stop] = np.where(alone[..., None], 0.0, rows[..., first:stop])
-        rows = np.where(np.asarray(left[..., 0] == 0)[..., None], 0.0, rows)
-        if np.any((rows[..., 3] <= 0.0) & (left[..., 0] > 0)):
-            raise MergeError(
-                "more weight would be removed than there is; nothing was changed"
-            )
-        return rows
 
     def affine(self, scale=1.0, offset=0.0):
         """A new accumulator of ``scale * x + offset``.
@@ -386,12 +345,14 @@ class Moments(Accumulator, Statistics):
         changed = affine_view(self._view(), scale, offset)
         other = self._empty()
         with np.errstate(all="ignore"):
-            rows = other._row_of(changed.vector)
+            rows = rows_of(changed.vector, other._stream)
             empty = settled.row[..., 3] == 0.0
             rows = np.where(np.asarray(empty)[..., None], settled.row, rows)
         other._replace(rows, settled.tally)
         ends = np.stack([np.asarray(changed.minimum), np.asarray(changed.maximum)], axis=-1)
-        ends = np.where(np.asarray(empty)[..., None], settled.extremes, ends.reshape(settled.extremes.shape))
+        ends = np.where(
+            np.asarray(empty)[..., None], settled.extremes, ends.reshape(settled.extremes.shape)
+        )
         other._stream.extremes[...] = ends + 0.0
         return other
 
@@ -450,7 +411,9 @@ class Moments(Accumulator, Statistics):
         places = which if isinstance(which, tuple) else (which,)
         places = tuple(checked_degree(i, -(2**62), "channel") for i in places)
         if len(places) != len(self._shape):
-            raise IndexError(f"a channel of shape {self._shape} has {len(self._shape)} indices, got {which!r}")
+            raise IndexError(
+                f"a channel of shape {self._shape} has {len(self._shape)} indices, got {which!r}"
+            )
         for place, length in zip(places, self._shape, strict=True):
             if not -length <= place < length:
                 raise IndexError(f"channel {which!r} is outside shape {self._shape}")
@@ -488,15 +451,17 @@ class Moments(Accumulator, Statistics):
         1.0182337649086284
         """
         count = checked_degree(count, least=1, name="count")
-        if count >= _MOST:
+        if count >= MOST_COUNTED:
             raise ValueError(f"count must be below 2**63 - 1, got {count}")
-        mean = _finite_array("mean", mean)
-        moments = [_finite_array(f"central[{i}]", m, mean.shape) for i, m in enumerate(central)]
+        mean = finite_array("mean", mean)
+        moments = [finite_array(f"central[{i}]", m, mean.shape) for i, m in enumerate(central)]
         for i, values in enumerate(moments):
             if i % 2 == 0 and np.any(values < 0.0):
                 raise ValueError(f"central moment {i + 2} must not be negative, got {values}")
             if count == 1 and np.any(values != 0.0):
-                raise ValueError(f"one reading has no spread, but central moment {i + 2} is {values}")
+                raise ValueError(
+                    f"one reading has no spread, but central moment {i + 2} is {values}"
+                )
         order = len(moments) + 1
         if order > 16:
             raise ValueError(f"central must hold at most 15 moments, got {len(moments)}")
@@ -510,7 +475,7 @@ class Moments(Accumulator, Statistics):
             vector = vector._replace(weight=np.broadcast_to(vector.weight, flat.shape))
             tally = np.zeros_like(self._stream.tally)
             tally[..., 0] = count
-            self._replace(self._row_of(vector), tally)
+            self._replace(rows_of(vector, self._stream), tally)
         ends = np.broadcast_to(np.asarray(minimum, float), mean.shape).reshape(flat.shape)
         self._stream.extremes[..., 0] = ends + 0.0
         ends = np.broadcast_to(np.asarray(maximum, float), mean.shape).reshape(flat.shape)
@@ -551,7 +516,7 @@ class Moments(Accumulator, Statistics):
 
     @property
     def count(self):
-        """Readings taken in; for frequencies the sum of the weights.  int, or array of ``shape``."""
+        """Readings taken in, an int, or array of ``shape``; of frequencies the sum."""
         return self._whole_number(self._settle().tally[..., 0])
 
     @property
@@ -652,43 +617,10 @@ class Moments(Accumulator, Statistics):
             shape,
             self._weights,
             readings,
-            self._vector_of(settled.row, shape),
+            vector_of(settled.row, self._stream.order, self._weights, shape),
             ends[..., 0],
             ends[..., 1],
         )
-
-    def _vector_of(self, row, shape=None):
-        """Rows of fields as a ``MomentVector``; ``shape`` folds the channels."""
-        lead = row.shape[:-1] if shape is None else shape
-        field = np.moveaxis(row, -1, 0).reshape((row.shape[-1], *lead))
-        order = self._stream.order
-        powers, weight_scale = None, 0.0
-        if self._weights is not None:
-            weight_scale, powers = field[4 + order], field[5 + order : 8 + order]
-        return _central.MomentVector(
-            field[3], field[0], field[1], field[2], field[5 : 4 + order], weight_scale, powers
-        )
-
-    def _row_of(self, vector):
-        """A ``MomentVector`` (channels flat) as rows of fields, in the units of its content."""
-        stream = self._stream
-        lead = () if self._form.size is None else (self._form.size,)
-        row = np.zeros((*lead, stream.fields))
-
-        def flat(values):
-            return np.asarray(values, float).reshape(lead)
-
-        row[..., 0], row[..., 1] = flat(vector.mean), flat(vector.rest)
-        row[..., 2], row[..., 3] = flat(vector.scale), flat(vector.weight)
-        for k, sums in enumerate(vector.sums, start=2):
-            row[..., 3 + k] = flat(sums)
-        if self._weights is not None:
-            row[..., 4 + stream.order] = flat(np.broadcast_to(vector.weight_scale, lead))
-            for j, power in enumerate(vector.powers):
-                row[..., 5 + stream.order + j] = flat(power)
-        for one in row.reshape(-1, stream.fields):
-            _vector.settle_units(one, stream.order, stream.weighted)
-        return row
 
     def _empty(self):
         return Moments(
@@ -732,179 +664,11 @@ class Moments(Accumulator, Statistics):
 
     def _write(self, writer, resume):
         self._flush()
-        writer.pack(
-            "6B",
-            self._order,
-            _WEIGHTS.index(self._weights),
-            POLICIES.index(self._nonfinite),
-            TRANSFORMS.index(self._transform),
-            len(self._shape),
-            self._names is not None,
-        )
-        writer.pack(f"{len(self._shape)}Q", *self._shape)
-        for name in self._names or ():
-            writer.text(name)
-        stream = self._stream
-        state = stream if resume else self._settle()
-        writer.integers(state.tally[..., :2])
-        writer.doubles(state.extremes)
-        writer.doubles(_without_first(stream.table[..., 0, :] if resume else state.row))
-        if resume:
-            fill = stream.fill
-            low = stream.low is not None and bool(stream.low[:fill].any())
-            writer.pack("QIB", stream.blocks, fill, low)
-            for level in range(stream.blocks.bit_length()):
-                if stream.blocks >> level & 1:
-                    writer.doubles(_without_first(stream.table[..., 6 - 1 + level, :]))
-            if fill:
-                writer.doubles(stream.buffer[:fill])
-                if low:
-                    writer.doubles(stream.low[:fill])
-                if stream.weighted:
-                    writer.doubles(stream.w[:fill])
+        write_payload(writer, self, None if resume else self._settle())
 
     @classmethod
     def _from_payload(cls, reader, flags):
-        order, weights, policy, transform, axes, named = reader.unpack("6B")
-        if not (1 <= order <= 16 and weights < 3 and policy < 3 and transform < 4 and named < 2):
-            raise StateError("state holds settings that do not exist")
-        shape = reader.unpack(f"{axes}Q") if axes else ()
-        channels = 1
-        for length in shape:
-            channels *= length
-        if channels < 1 or axes > 32:
-            raise StateError(f"state holds an impossible shape {shape}")
-        lead = (channels,) if axes else ()
-        # Everything below has a length in the bytes: nothing is made before it is read.
-        names = tuple(reader.text() for _ in range(channels)) if named and axes == 1 else None
-        tally = reader.integers((*lead, 2))
-        extremes = reader.doubles((*lead, 2))
-        fields = even(order) + 3 + (4 if weights else 0)
-        rows = _checked_rows(reader.doubles((*lead, fields)), even(order), bool(weights))
-        try:
-            self = cls(
-                order,
-                shape=shape if names is None else (),
-                names=names,
-                weights=_WEIGHTS[weights],
-                nonfinite=POLICIES[policy],
-                transform=TRANSFORMS[transform],
-            )
-        except (TypeError, ValueError) as error:
-            raise StateError(f"state holds impossible settings: {error}") from None
-        if np.any(tally < 0) or np.any(tally == _MOST):
-            raise StateError("state holds a negative or impossible count")
-        stream = self._stream
-        stream.tally[..., :2] = tally
-        stream.extremes[...] = extremes
-        stream.table[..., 0, :] = rows
-        if flags & CONTINUED:
-            self._read_working_state(reader)
-        elif np.any((tally[..., 0] > 0) != (rows[..., 3] > 0.0)):
-            raise StateError("state holds readings without weight, or weight without readings")
-        return self
-
-    def _read_working_state(self, reader):
-        stream = self._stream
-        blocks, fill, low = reader.unpack("QIB")
-        if blocks >= 1 << 50 or fill >= stream.rows or low > 1:
-            raise StateError("state holds an impossible block count")
-        lead = () if stream.channels is None else (stream.channels,)
-        table = np.zeros((*lead, 5 + max(1, blocks.bit_length()), stream.fields))
-        table[..., 0, :] = stream.table[..., 0, :]
-        for level in range(blocks.bit_length()):
-            if blocks >> level & 1:
-                rows = reader.doubles((*lead, stream.fields - 1))
-                table[..., 5 + level, :] = _checked_rows(rows, stream.order, stream.weighted)
-        stream.table, stream.blocks = table, blocks
-        if fill:
-            readings = reader.doubles((fill, *lead))
-            rest = reader.doubles((fill, *lead)) if low else None
-            w = reader.doubles((fill,)) if stream.weighted else None
-            try:
-                stream.feed(readings, rest, w)
-            except ValueError as error:
-                raise StateError(f"state holds readings that cannot be: {error}") from None
-            if rest is not None and not np.all(np.isfinite(rest)):
-                raise StateError("state holds readings that cannot be")
-
-
-def _without_first(rows):
-    """A table's row without the first power sum, which is always zero."""
-    return np.delete(rows, 4, axis=-1)
-
-
-def _checked_rows(rows, order, weighted):
-    """Moment vectors from bytes: the numbers kernels rely on are what they must be."""
-    rows = np.insert(rows, 4, 0.0, axis=-1)
-    scales = [rows[..., 2]] + ([rows[..., 4 + order]] if weighted else [])
-    for scale in scales:
-        if np.any(scale != np.rint(scale)) or np.any(np.abs(scale) > _LARGEST_SCALE):
-            raise StateError("state holds a scale that cannot be")
-    weight = rows[..., 3]
-    good = (weight >= 0.0) & (weight < np.inf)
-    even_sums = rows[..., 5 : 4 + order : 2]
-    good &= ~np.any(even_sums < 0.0, axis=-1)
-    finite = np.isfinite(rows[..., 0])
-    good &= ~finite | (np.all(np.isfinite(rows), axis=-1))
-    if weighted:
-        good &= np.all(rows[..., 5 + order :] >= 0.0, axis=-1)
-    if not np.all(good):
-        raise StateError("state holds moments that cannot be")
-    return rows
-
-
-def _checked_order(order):
-    if isinstance(order, bool) or not hasattr(order, "__index__"):
-        raise TypeError(f"order must be an integer from 1 to 16, got {order!r}")
-    order = order.__index__()
-    if not 1 <= order <= 16:
-        raise ValueError(f"order must be an integer from 1 to 16, got {order}")
-    return order
-
-
-def _checked_shape(shape, names):
-    if names is not None:
-        if isinstance(names, str):
-            raise TypeError(f"names must be a sequence of str, got the str {names!r}")
-        names = tuple(names)
-        for name in names:
-            if not isinstance(name, str):
-                raise TypeError(f"names must be str, got {name!r}")
-        if len(set(names)) != len(names):
-            raise ValueError(f"names must differ from each other, got {names}")
-    if hasattr(shape, "__index__") and not isinstance(shape, bool):
-        shape = (shape,)
-    if not isinstance(shape, (tuple, list)):
-        raise TypeError(f"shape must be an integer or a tuple of integers, got {shape!r}")
-    shape = tuple(checked_degree(length, 1, "shape") for length in shape)
-    if names is not None:
-        if shape and shape != (len(names),):
-            raise ValueError(f"shape {shape} does not fit {len(names)} names")
-        if not names:
-            raise ValueError("names must name at least one channel")
-        shape = (len(names),)
-    return shape, names
-
-
-def _choice(name, value, choices):
-    if not (value is None or isinstance(value, str)):
-        raise TypeError(f"{name} must be one of {choices}, got {value!r}")
-    if value not in choices:
-        raise ValueError(f"{name} must be one of {choices}, got {value!r}")
-    return value
-
-
-def _finite_array(name, value, shape=None):
-    try:
-        array = np.asarray(value, dtype=np.float64)
-    except (TypeError, ValueError):
-        raise TypeError(f"{name} must be a number or an array of numbers, got {value!r}") from None
-    if not np.all(np.isfinite(array)):
-        raise ValueError(f"{name} must be finite, got {value!r}")
-    if shape is not None and array.shape != shape:
-        raise ValueError(f"{name} must have the shape of mean, {shape}, got {array.shape}")
-    return array
+        return read_payload(cls, reader, bool(flags & CONTINUED))
 
 
 def _guard(moments, like):
@@ -922,6 +686,3 @@ def _counts(tally):
 def _span(values):
     least, most = int(np.min(values)), int(np.max(values))
     return f"{least:,}" if least == most else f"{least:,}..{most:,}"
-
-
-

@@ -6,6 +6,8 @@ comes later does not depend on when a merge came.  ``table`` is (rows, fields), 
 (channels, rows, fields); ``tally`` and ``extremes`` cover the finished blocks and the base.
 """
 
+import itertools
+
 import numpy as np
 
 from ..errors import NonFiniteError
@@ -39,7 +41,7 @@ def block_rows(channels):
 class Settled:
     """Everything folded into one moment vector: ``row`` (channels, fields) or (fields,)."""
 
-    __slots__ = ("row", "tally", "extremes", "view")
+    __slots__ = ("extremes", "row", "tally", "view")
 
     def __init__(self, row, tally, extremes):
         self.row = row
@@ -52,8 +54,19 @@ class Stream:
     """One stream of readings, or one for every channel."""
 
     __slots__ = (
-        "order", "weights", "channels", "policy", "rows", "table", "blocks",
-        "buffer", "low", "w", "fill", "tally", "extremes",
+        "blocks",
+        "buffer",
+        "channels",
+        "extremes",
+        "fill",
+        "low",
+        "order",
+        "policy",
+        "rows",
+        "table",
+        "tally",
+        "w",
+        "weights",
     )  # fmt: skip
 
     def __init__(self, order, weights, channels, policy):
@@ -207,7 +220,7 @@ class Stream:
         if lead:
             blocks = self._take(*part(0, edges[0]), table, blocks, tally, extremes, offset)
         with ThreadPoolExecutor(max_workers=min(threads, max(groups, 1))) as pool:
-            jobs = [pool.submit(reduce, *edge) for edge in zip(edges, edges[1:], strict=False)]
+            jobs = [pool.submit(reduce, *edge) for edge in itertools.pairwise(edges)]
             try:
                 results = [job.result() for job in jobs]
             except BaseException:
@@ -388,12 +401,13 @@ def refuse(kind, place, column, value, weight):
     if kind == _blocks.READING:
         raise NonFiniteError(
             f"reading at {where} is {float(value)!r}; nothing was taken in. "
-            'nonfinite="omit" leaves such readings out and counts them, "propagate" lets them through',
+            'nonfinite="omit" leaves such readings out and counts them, "propagate" lets them '
+            "through",
             where,
         )
     what = {
         _blocks.WEIGHT: "weights must be finite and not negative",
-        _blocks.FRACTION: "frequencies must be whole numbers (for others: weights=\"reliability\")",
+        _blocks.FRACTION: 'frequencies must be whole numbers (for others: weights="reliability")',
         _blocks.TOO_MANY: "a frequency must be at most 2**53",
     }[kind]
     raise ValueError(f"{what}, got {float(weight)!r} at {place}; nothing was taken in")

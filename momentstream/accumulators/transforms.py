@@ -28,9 +28,9 @@ def transformed(x, low, transform, nonfinite):
 def _logarithm(x, low):
     from .lazy import transforms
 
-    return transforms.logarithm(x.reshape(-1), _no_rest if low is None else low.reshape(-1)).reshape(
-        x.shape
-    )
+    return transforms.logarithm(
+        x.reshape(-1), _no_rest if low is None else low.reshape(-1)
+    ).reshape(x.shape)
 
 
 _no_rest = np.empty(0)

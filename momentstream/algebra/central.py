@@ -24,7 +24,9 @@ class MomentVector(NamedTuple):
     scale: Any  # integers, kept as doubles
     sums: Any  # M2 .. Mp, shape (p - 1, ...), in units of 2**(weight_scale + k * scale)
     weight_scale: Any = 0.0
-    powers: Any = None  # reliability weights: sums of w**2, w**3, w**4 in units of 2**(j * weight_scale)
+    powers: Any = (
+        None  # reliability weights: sums of w**2, w**3, w**4 in units of 2**(j * weight_scale)
+    )
 
 
 def shift(values, by):
@@ -162,6 +164,7 @@ def affine(vector, scale, offset):
 
 def _two_product(a, b):
     """The rounded product, and what the rounding left (Dekker); no extreme exponents."""
+
     def split(x):
         large = x * 134217729.0
         high = large - (large - x)

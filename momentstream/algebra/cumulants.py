@@ -2,7 +2,8 @@
 
 Recursions: Smith (1995), "A recursive formulation of the old problem of obtaining moments from
 cumulants and vice versa", The American Statistician (from memory).  k-statistics: Fisher (1928);
-Kenney & Keeping (1951).  Reliability weights: Rimoldini (2014), Astronomy and Computing (re-derived).
+Kenney & Keeping (1951).  Reliability weights: Rimoldini (2014), Astronomy and Computing
+(re-derived).
 """
 
 from math import comb, prod
@@ -79,6 +80,5 @@ def weighted_k_statistic(k, v, m):
     square = v[2] * v[2]
     below = (1 - v[2]) * (1 - 6 * v[2] + 8 * v[3] + 3 * square - 6 * v[4])
     return (
-        (1 - 4 * v[3] + 3 * square) * m[4]
-        - 3 * (1 - 2 * v[2] + 4 * v[3] - 3 * square) * m[2] ** 2
+        (1 - 4 * v[3] + 3 * square) * m[4] - 3 * (1 - 2 * v[2] + 4 * v[3] - 3 * square) * m[2] ** 2
     ) / below

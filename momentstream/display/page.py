@@ -1,10 +1,10 @@
 """Tables as HTML; everything that comes from outside is escaped."""
 
-from html import escape
-
 
 def table(header, rows, caption=""):
     """An HTML table of text cells; the first column holds names."""
+    from html import escape
+
     parts = ["<table>"]
     if caption:
         parts.append(f"<caption>{escape(caption)}</caption>")

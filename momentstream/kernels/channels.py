@@ -6,26 +6,21 @@ sweep, or has gaps, is gathered and reduced alone, by sums in the same order.
 """
 
 import numpy as np
-
 from numba.core import types
 from numba.extending import overload
 
 from .blocks import (
     COUNT,
-    HEAD_ROWS,
     NO,
     POSITION,
-    ZERO,
     add_count,
     check_weights,
     count_readings,
     extend,
-    part_of,
-    settled_by_sweep,
     take_part,
-    write_vector,
 )
 from .compiling import compiled, internal
+from .reduction import HEAD_ROWS, ZERO, part_of, settled_by_sweep, write_vector
 from .sums import LEAST, MOST, PIVOT, ROOM
 from .tiles import copy_sums, row_sums, weight_sums
 from .vector import NEW, clear_row, combine_pair, fold_levels, insert_block
@@ -124,9 +119,7 @@ def take_row_block(x, low, w, policy, whole, order, tables, tally, extremes):
 
 
 @compiled
-def take_row_blocks(
-    x, low, w, block_rows, policy, whole, order, tables, blocks, tally, extremes
-):
+def take_row_blocks(x, low, w, block_rows, policy, whole, order, tables, blocks, tally, extremes):
     """Take whole blocks of rows in; returns the block count, -1 if something was refused."""
     channels = x.shape[1]
     room, pivots, sums, part = _rooms(channels, order)

@@ -19,18 +19,20 @@ def compiled(function=None, **options):
     options.setdefault("error_model", "numpy")
     try:
         return numba.njit(nogil=True, cache=True, **options)(function)
-    except RuntimeError:  # Numba found no folder it can write to: a read-only install without a home
+    except (
+        RuntimeError
+    ):  # Numba found no folder it can write to: a read-only install without a home
         return numba.njit(nogil=True, **options)(function)
 
 
 def internal(function=None, **options):
-    """``compiled`` for functions that only kernels call: no entry from Python, no file of their own."""
+    """``compiled`` for what only kernels call: no entry from Python, no file of its own."""
     if function is None:
         return lambda function: internal(function, **options)
     options.setdefault("error_model", "numpy")
-    return numba.njit(
-        nogil=True, no_cpython_wrapper=True, no_cfunc_wrapper=True, **options
-    )(function)
+    return numba.njit(nogil=True, no_cpython_wrapper=True, no_cfunc_wrapper=True, **options)(
+        function
+    )
 
 
 @intrinsic
@@ -48,7 +50,9 @@ def _copy_eight(typing_context, source, place, target, to):
         double, eight = ir.DoubleType(), ir.VectorType(ir.DoubleType(), 8)
 
         def pointer(array, index):
-            data = context.make_array(signature.args[array])(context, builder, arguments[array]).data
+            data = context.make_array(signature.args[array])(
+                context, builder, arguments[array]
+            ).data
             return builder.bitcast(builder.gep(data, [arguments[index]]), eight.as_pointer())
 
         values = builder.load(pointer(0, 1), align=8)

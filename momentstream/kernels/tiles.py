@@ -1,9 +1,9 @@
 """Power sums of many channels at once: vector instructions written out.
 
 ``sum_tile(x, w, first, last, channel, pivots, sums)`` adds the powers of ``x - pivot``, row by row
-from ``first`` to ``last``, of channels ``channel`` onwards (eight or one) to ``sums``.  Each channel's
-readings are added in their order with fused multiply-add, so that a channel's bits do not depend on
-how many channels there are, on its place among them, or on whether its block was scaled first.
+from ``first`` to ``last``, of channels ``channel`` onwards (eight or one) to ``sums``.  A channel's
+readings are added in their order with fused multiply-add: its bits depend neither on how many
+channels there are, nor on its place among them, nor on whether its block was scaled first.
 LLVM's own vectoriser gave up on the overlap checks between the rows here (three times slower).
 
 ``sums`` has ``order + 2`` rows: the least reading, the sums of order 1 to ``order``, the greatest.

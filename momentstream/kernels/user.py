@@ -130,7 +130,9 @@ def warm_up():
     for w in (None, x + 1.0):
         table = np.zeros((rows_for(2), 8 if w is None else 12))
         blocks = take_blocks(x, None, w, RAISE, False, 4, table, 0, tally, extremes)
-        take_block(x[:9], None, None if w is None else w[:9], RAISE, False, 4, table, tally, extremes)
+        take_block(
+            x[:9], None, None if w is None else w[:9], RAISE, False, 4, table, tally, extremes
+        )
         first_refused(x, w, RAISE, False, tally)
         fold_levels(table, blocks, 4, w is not None)
         combine_pair(table[BASE], table[NEW], 4, w is not None)

@@ -42,7 +42,9 @@ def combine(parts):
     levels: list = []
     for number, part in enumerate(parts):
         if not isinstance(part, Accumulator):
-            raise TypeError(f"combine takes accumulators, got {type(part).__name__} as part {number}")
+            raise TypeError(
+                f"combine takes accumulators, got {type(part).__name__} as part {number}"
+            )
         carried, owned = part, False
         level = 0
         while level < len(levels) and levels[level] is not None:

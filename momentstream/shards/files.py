@@ -1,7 +1,7 @@
 """States on disk: written whole or not at all."""
 
+import contextlib
 import os
-import tempfile
 
 from ..accumulators.base import Accumulator
 from ..accumulators.moments import Moments  # noqa: F401  (its kind must be known to the reader)
@@ -49,6 +49,8 @@ def save(x, path):
     """
     if not isinstance(x, Accumulator):
         raise TypeError(f"save takes an accumulator, got {type(x).__name__}")
+    import tempfile
+
     data = x.to_bytes(resume=True)
     path = os.fspath(path)
     folder = os.path.dirname(os.path.abspath(path))
@@ -61,10 +63,8 @@ def save(x, path):
         os.chmod(temporary, _permissions(path))
         os.replace(temporary, path)
     except BaseException:
-        try:
+        with contextlib.suppress(FileNotFoundError):
             os.unlink(temporary)
-        except FileNotFoundError:
-            pass
         raise
     _flush_folder(folder)
 

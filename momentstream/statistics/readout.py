@@ -296,7 +296,10 @@ class Statistics:
         """The k-th moment about a point, and the scale s it is in units of ``2**(k * s)`` of."""
         v = view.vector
         # Units in which neither the point nor the readings overflow.
-        sizes = [v.scale + np.frexp(np.abs(v.mean))[1], np.frexp(np.abs(np.asarray(about, float)))[1]]
+        sizes = [
+            v.scale + np.frexp(np.abs(v.mean))[1],
+            np.frexp(np.abs(np.asarray(about, float)))[1],
+        ]
         if len(v.sums):
             spread = np.sqrt(v.sums[0] / v.weight)
             sizes.append(v.scale + np.where(spread > 0.0, np.frexp(spread)[1], -5000))
