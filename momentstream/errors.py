@@ -22,7 +22,7 @@ class NonFiniteError(MomentstreamError, ValueError):
         Where it stood in the call: the flat index, or (row, column) for channels.
     """
 
-    def __init__(self, message, position):
+    def __init__(self, message: str, position: int | tuple[int, ...]) -> None:
         super().__init__(message)
         self.position = position
 

@@ -1,7 +1,17 @@
 """What every accumulator shares: operators, copying, bytes, pickling."""
 
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any, TypeVar
+
 from ..codec import CONTINUED, Writer, decode, encode
 from ..errors import MergeError
+
+if TYPE_CHECKING:
+    from collections.abc import Iterable, Iterator
+    from typing import Self
+
+Item = TypeVar("Item")
 
 
 class Accumulator:
@@ -14,24 +24,31 @@ class Accumulator:
     __slots__ = ()
     _kind: int
 
-    def __add__(self, other):
+    if TYPE_CHECKING:
+
+        def copy(self) -> Self: ...
+        def merge(self, other: Self) -> Self: ...
+        def update(self, values: Any) -> Self: ...
+        def _write(self, writer: Writer, resume: bool) -> None: ...
+
+    def __add__(self, other: Self) -> Self:
         if not isinstance(other, Accumulator):
             return NotImplemented
         return self.copy().merge(other)
 
-    def __radd__(self, other):
+    def __radd__(self, other: int) -> Self:
         # sum() begins with 0.
         if isinstance(other, int) and other == 0:
             return self.copy()
         return NotImplemented
 
-    def __copy__(self):
+    def __copy__(self) -> Self:
         return self.copy()
 
-    def __deepcopy__(self, memo):
+    def __deepcopy__(self, memo: object) -> Self:
         return self.copy()
 
-    def __eq__(self, other):
+    def __eq__(self, other: object) -> bool:
         if type(other) is not type(self):
             return NotImplemented
         return self.to_bytes() == other.to_bytes()
@@ -41,7 +58,7 @@ class Accumulator:
     def __reduce__(self):
         return type(self).from_bytes, (self.to_bytes(),)
 
-    def to_bytes(self, resume=False):
+    def to_bytes(self, resume: bool = False) -> bytes:
         """The state as bytes.
 
         Parameters
@@ -59,7 +76,7 @@ class Accumulator:
         return encode(self._kind, CONTINUED if resume else 0, writer.payload())
 
     @classmethod
-    def from_bytes(cls, data):
+    def from_bytes(cls, data: bytes | bytearray | memoryview) -> Self:
         """The accumulator whose bytes these are, of either form.
 
         Raises
@@ -69,7 +86,7 @@ class Accumulator:
         """
         return decode(data, cls)
 
-    def tap(self, iterable):
+    def tap(self, iterable: Iterable[Item]) -> Iterator[Item]:
         """Count each item, then yield it unchanged.
 
         Parameters

@@ -1,5 +1,9 @@
 """Moments of a stream of readings, or of many streams side by side."""
 
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
 import numpy as np
 
 from ..algebra import central as _central
@@ -15,6 +19,14 @@ from .rows import removed_rows, rows_of, vector_of
 from .settings import checked_order, checked_shape, choice, finite_array
 from .stream import POLICIES, Stream, even
 from .transforms import TRANSFORMS, transformed
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+    from typing import Self
+
+    from numpy.typing import ArrayLike, NDArray
+
+    from ..statistics.readout import Value
 
 _FLUSH = 1024
 
@@ -90,15 +102,22 @@ class Moments(Accumulator, Statistics):
     )  # fmt: skip
 
     def __init__(
-        self, order=4, *, shape=(), names=None, weights=None, nonfinite="raise", transform=None
-    ):
+        self,
+        order: int = 4,
+        *,
+        shape: int | tuple[int, ...] = (),
+        names: Sequence[str] | None = None,
+        weights: str | None = None,
+        nonfinite: str = "raise",
+        transform: str | None = None,
+    ) -> None:
         self._order = checked_order(order)
         self._shape, self._names = checked_shape(shape, names)
         self._weights = choice("weights", weights, WEIGHTS)
         self._nonfinite = choice("nonfinite", nonfinite, POLICIES)
         self._transform = choice("transform", transform, TRANSFORMS)
         self._form = Form(self._shape, self._names)
-        self._pending = []
+        self._pending: list[float] = []
         # Single floats may wait in a list, where nothing has to be known of them at once.
         self._quick = self._shape == () and weights is None and transform is None
         self._settled = None
@@ -109,7 +128,7 @@ class Moments(Accumulator, Statistics):
 
     # -- feeding -----------------------------------------------------------------------------
 
-    def update(self, values, weights=None, *, threads=1):
+    def update(self, values: Any, weights: Any = None, *, threads: int = 1) -> Self:
         """Take readings in, all of them or, if the call raises, none.
 
         Parameters
@@ -206,7 +225,7 @@ class Moments(Accumulator, Statistics):
             self._pending = []
             self._settled = None
 
-    def clear(self):
+    def clear(self) -> Self:
         """Forget everything that was fed; returns the accumulator itself."""
         self._pending = []
         self._settled = None
@@ -215,7 +234,7 @@ class Moments(Accumulator, Statistics):
 
     # -- combining ---------------------------------------------------------------------------
 
-    def merge(self, other):
+    def merge(self, other: Self) -> Self:
         """Take another accumulator's readings in, as if they had been fed here.
 
         Parameters
@@ -263,7 +282,7 @@ class Moments(Accumulator, Statistics):
         if total.max() >= MOST_COUNTED:
             raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
 
-    def remove(self, other):
+    def remove(self, other: Self) -> Self:
         """Take a part that is in here out again.
 
         Parameters
@@ -311,7 +330,7 @@ class Moments(Accumulator, Statistics):
         extremes[np.asarray(left[..., 0] == 0)] = (np.inf, -np.inf)
         return self
 
-    def affine(self, scale=1.0, offset=0.0):
+    def affine(self, scale: float = 1.0, offset: float = 0.0) -> Moments:
         """A new accumulator of ``scale * x + offset``.
 
         Parameters
@@ -356,7 +375,7 @@ class Moments(Accumulator, Statistics):
         other._stream.extremes[...] = ends + 0.0
         return other
 
-    def copy(self):
+    def copy(self) -> Self:
         """An independent accumulator that continues bit for bit as this one would."""
         self._flush()
         other = self._empty()
@@ -364,7 +383,7 @@ class Moments(Accumulator, Statistics):
         other._settled = self._settled
         return other
 
-    def channel(self, which):
+    def channel(self, which: int | tuple[int, ...] | str) -> Moments:
         """The moments of one channel, as an accumulator of its own.
 
         Parameters
@@ -421,7 +440,15 @@ class Moments(Accumulator, Statistics):
         return int(np.ravel_multi_index(places, self._shape))
 
     @classmethod
-    def from_central(cls, mean, central, *, count, minimum=np.nan, maximum=np.nan):
+    def from_central(
+        cls,
+        mean: ArrayLike,
+        central: Sequence[ArrayLike],
+        *,
+        count: int,
+        minimum: ArrayLike = np.nan,
+        maximum: ArrayLike = np.nan,
+    ) -> Self:
         """An accumulator from moments computed elsewhere; it can be merged and fed.
 
         Parameters
@@ -453,8 +480,8 @@ class Moments(Accumulator, Statistics):
         count = checked_degree(count, least=1, name="count")
         if count >= MOST_COUNTED:
             raise ValueError(f"count must be below 2**63 - 1, got {count}")
-        mean = finite_array("mean", mean)
-        moments = [finite_array(f"central[{i}]", m, mean.shape) for i, m in enumerate(central)]
+        level = finite_array("mean", mean)
+        moments = [finite_array(f"central[{i}]", m, level.shape) for i, m in enumerate(central)]
         for i, values in enumerate(moments):
             if i % 2 == 0 and np.any(values < 0.0):
                 raise ValueError(f"central moment {i + 2} must not be negative, got {values}")
@@ -465,74 +492,72 @@ class Moments(Accumulator, Statistics):
         order = len(moments) + 1
         if order > 16:
             raise ValueError(f"central must hold at most 15 moments, got {len(moments)}")
-        self = cls(order, shape=mean.shape)
-        flat = mean.reshape(-1) if mean.shape else mean
-        moments = [m.reshape(-1) if mean.shape else m for m in moments]
+        self = cls(order, shape=level.shape)
+        stream = self._stream
+        lead = stream.tally.shape[:-1]
+        ends = [np.broadcast_to(np.asarray(end, float), level.shape) for end in (minimum, maximum)]
+        moments = [values.reshape(lead) for values in moments]
         if even(order) != order:
-            moments.append(_guard(moments, flat))
+            moments.append(_guard(moments, level.reshape(lead)))
         with np.errstate(all="ignore"):
-            vector = scaled_vector(flat, moments, float(count))
-            vector = vector._replace(weight=np.broadcast_to(vector.weight, flat.shape))
-            tally = np.zeros_like(self._stream.tally)
+            vector = scaled_vector(level.reshape(lead), moments, float(count))
+            tally = np.zeros_like(stream.tally)
             tally[..., 0] = count
-            self._replace(rows_of(vector, self._stream), tally)
-        ends = np.broadcast_to(np.asarray(minimum, float), mean.shape).reshape(flat.shape)
-        self._stream.extremes[..., 0] = ends + 0.0
-        ends = np.broadcast_to(np.asarray(maximum, float), mean.shape).reshape(flat.shape)
-        self._stream.extremes[..., 1] = ends + 0.0
+            self._replace(rows_of(vector, stream), tally)
+        self._stream.extremes[...] = np.stack([end.reshape(lead) for end in ends], axis=-1) + 0.0
         return self
 
     # -- knowing -----------------------------------------------------------------------------
 
     @property
-    def order(self):
+    def order(self) -> int:
         """The highest moment kept."""
         return self._order
 
     @property
-    def shape(self):
+    def shape(self) -> tuple[int, ...]:
         """The shape of one reading."""
         return self._shape
 
     @property
-    def names(self):
+    def names(self) -> tuple[str, ...] | None:
         """The names of the channels, a tuple, or None."""
         return self._names
 
     @property
-    def weights(self):
+    def weights(self) -> str | None:
         """The kind of weights: None, "frequency" or "reliability"."""
         return self._weights
 
     @property
-    def nonfinite(self):
+    def nonfinite(self) -> str:
         """What a missing reading does: "raise", "omit" or "propagate"."""
         return self._nonfinite
 
     @property
-    def transform(self):
+    def transform(self) -> str | None:
         """What is done to readings first: None, "log", "reciprocal" or "abs"."""
         return self._transform
 
     @property
-    def count(self):
+    def count(self) -> int | NDArray[np.int64]:
         """Readings taken in, an int, or array of ``shape``; of frequencies the sum."""
         return self._whole_number(self._settle().tally[..., 0])
 
     @property
-    def omitted(self):
+    def omitted(self) -> int | NDArray[np.int64]:
         """Readings left out as missing.  int, or array of ``shape``."""
         return self._whole_number(self._settle().tally[..., 1])
 
     @property
-    def weight(self):
+    def weight(self) -> Value:
         """The sum of the weights (without weights: the count).  float, or array of ``shape``."""
         view = self._view()
         with np.errstate(all="ignore"):
             return self._read(_central.shift(view.vector.weight, view.vector.weight_scale), view)
 
     @property
-    def effective_count(self):
+    def effective_count(self) -> Value:
         """How many readings of equal weight would tell as much (Kish): W**2 / V2 for reliability
         weights, else the weight.  float, or array of ``shape``; 0 when empty."""
         view = self._view()
@@ -543,7 +568,7 @@ class Moments(Accumulator, Statistics):
             value = v.weight * v.weight / np.where(v.weight > 0.0, v.powers[0], 1.0)
             return self._read(value, view)
 
-    def summary(self):
+    def summary(self) -> Summary:
         """The immutable summary of what has been fed so far.
 
         Examples
@@ -567,27 +592,24 @@ class Moments(Accumulator, Statistics):
             names=self._names,
         )
 
-    def __repr__(self):
-        fields = [("order", str(self._order))]
+    def __repr__(self) -> str:
+        fields: list[tuple[str, Any]] = [("order", str(self._order))]
         if self._shape:
             fields.append(("shape", str(self._shape)))
-            count = self.count
-            fields.append(("count", _span(count)))
-        else:
-            fields.append(("count", self.count))
+        fields.append(("count", _span(self.count)))
         for name in ("weights", "transform"):
             if getattr(self, name) is not None:
                 fields.append((name, repr(getattr(self, name))))
         omitted = self.omitted
         if np.any(omitted):
-            fields.append(("omitted", _span(omitted) if self._shape else omitted))
+            fields.append(("omitted", _span(omitted)))
         if not self._shape:
             for name, least in (("mean", 1), ("std", 2), ("skewness", 3), ("kurtosis", 4)):
                 if self._order >= least:
                     fields.append((name, getattr(self, name)()))
         return one_line("Moments", fields)
 
-    def _repr_html_(self):
+    def _repr_html_(self) -> str:
         return self.summary()._repr_html_()
 
     # -- state -------------------------------------------------------------------------------

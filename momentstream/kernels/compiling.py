@@ -3,6 +3,8 @@
 With ``NUMBA_DISABLE_JIT=1`` every kernel is plain Python, and the hint does nothing.
 """
 
+from typing import Any
+
 import numba
 from llvmlite import ir
 from numba.core import types
@@ -78,18 +80,24 @@ def _selection(comparison):
     return select
 
 
-if numba.config.DISABLE_JIT:
+keep_apart: Any
+copy_eight: Any
+lesser: Any
+greater: Any
+PLAIN_PYTHON = bool(vars(numba.config)["DISABLE_JIT"])
 
-    def keep_apart():
+if PLAIN_PYTHON:
+
+    def _nothing():
         """Nothing, in plain Python."""
 
-    def copy_eight(source, place, target, to):
+    def _copy_eight_plainly(source, place, target, to):
         """Copy eight readings; whether all are finite."""
         eight = source[place : place + 8]
         target[to : to + 8] = eight
         return all(value - value == 0.0 for value in eight.tolist())
 
-    lesser, greater = min, max
+    keep_apart, copy_eight, lesser, greater = _nothing, _copy_eight_plainly, min, max
 else:
     copy_eight = _copy_eight
     # Extremes that vectorise: they say nothing where a NaN takes part (the sums show that one).

@@ -9,13 +9,12 @@ LLVM's own vectoriser gave up on the overlap checks between the rows here (three
 ``sums`` has ``order + 2`` rows: the least reading, the sums of order 1 to ``order``, the greatest.
 """
 
-import numba
 import numpy as np
 from llvmlite import ir
 from numba.core import cgutils, types
 from numba.extending import intrinsic
 
-from .compiling import REORDER, internal, keep_apart
+from .compiling import PLAIN_PYTHON, REORDER, internal, keep_apart
 from .sums import LEAST, LIGHTEST, MOST, POWERS
 
 TILE = 8
@@ -126,7 +125,7 @@ def _tile_plain(order, width):
     return sum_tile
 
 
-_make = _tile_plain if numba.config.DISABLE_JIT else _tile_intrinsic
+_make = _tile_plain if PLAIN_PYTHON else _tile_intrinsic
 _wide_2, _single_2 = _make(2, TILE), _make(2, 1)
 _wide_4, _single_4 = _make(4, TILE), _make(4, 1)
 _wide_8, _single_8 = _make(8, TILE), _make(8, 1)

@@ -1,9 +1,18 @@
 """One accumulator of many, by a balanced tree."""
 
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, TypeVar
+
 from ..accumulators.base import Accumulator
 
+if TYPE_CHECKING:
+    from collections.abc import Iterable
 
-def combine(parts):
+Part = TypeVar("Part", bound=Accumulator)
+
+
+def combine(parts: Iterable[Part]) -> Part:
     """Combine accumulators into a new one.
 
     Parameters

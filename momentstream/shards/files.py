@@ -1,14 +1,17 @@
 """States on disk: written whole or not at all."""
 
+from __future__ import annotations
+
 import contextlib
 import os
+from typing import Any
 
 from ..accumulators.base import Accumulator
 from ..accumulators.moments import Moments  # noqa: F401  (its kind must be known to the reader)
 from ..codec import decode
 
 
-def from_bytes(data):
+def from_bytes(data: bytes | bytearray | memoryview) -> Any:
     """The object whose bytes these are; the class is found by itself.
 
     Raises
@@ -25,7 +28,7 @@ def from_bytes(data):
     return decode(data)
 
 
-def save(x, path):
+def save(x: Accumulator, path: str | os.PathLike[str]) -> None:
     """Save a working state; it is in the file whole, or the old file is still there.
 
     Parameters
@@ -69,7 +72,7 @@ def save(x, path):
     _flush_folder(folder)
 
 
-def load(path):
+def load(path: str | os.PathLike[str]) -> Any:
     """What ``save`` wrote.
 
     Raises

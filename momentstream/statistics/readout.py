@@ -4,13 +4,20 @@ Conventions follow NumPy and SciPy: population statistics by default, ``ddof`` a
 rest.  Undefined is ``nan``; beyond the range of doubles ``inf`` with its sign, below it 0.0.
 """
 
-from typing import Any, NamedTuple
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 import numpy as np
 
 from ..algebra import cumulants as _cumulants
 from ..algebra.central import MomentVector, in_units, moved, shift
 from ..errors import OrderError
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    Value = float | NDArray[np.float64]
 
 
 class View(NamedTuple):
@@ -108,7 +115,7 @@ class Statistics:
 
     # -- level and spread --------------------------------------------------------------------
 
-    def mean(self):
+    def mean(self) -> Value:
         """The arithmetic mean, weighted where there are weights; nan when empty.
 
         Returns
@@ -127,7 +134,7 @@ class Statistics:
             value = np.where(v.weight > 0.0, shift(v.mean + v.rest, v.scale), np.nan)
             return self._read(value, view)
 
-    def variance(self, ddof=0):
+    def variance(self, ddof: float = 0) -> Value:
         """The mean squared deviation from the mean.
 
         Parameters
@@ -151,7 +158,7 @@ class Statistics:
         with np.errstate(all="ignore"):
             return self._read(shift(_variance_divided(view, ddof), 2 * view.vector.scale), view)
 
-    def std(self, ddof=0):
+    def std(self, ddof: float = 0) -> Value:
         """The standard deviation: the square root of ``variance(ddof)``.
 
         It may be finite where the variance is beyond the range of doubles.
@@ -170,7 +177,7 @@ class Statistics:
 
     # -- shape -------------------------------------------------------------------------------
 
-    def skewness(self, bias=True):
+    def skewness(self, bias: bool = True) -> Value:
         """The third standardized moment, m3 / m2**1.5.
 
         Parameters
@@ -200,7 +207,7 @@ class Statistics:
                 third = _k_statistic_in_units(view, 3)
             return self._read(_defined_ratio(third, _half_power(second, 3), second), view)
 
-    def kurtosis(self, excess=True, bias=True):
+    def kurtosis(self, excess: bool = True, bias: bool = True) -> Value:
         """The fourth standardized moment, m4 / m2**2, less 3.
 
         Parameters
@@ -236,7 +243,7 @@ class Statistics:
 
     # -- moments -----------------------------------------------------------------------------
 
-    def central(self, k):
+    def central(self, k: int) -> Value:
         """The k-th central moment, M_k / W.
 
         Parameters
@@ -265,7 +272,7 @@ class Statistics:
         with np.errstate(all="ignore"):
             return self._read(shift(central_moments(view, k)[k], k * view.vector.scale), view)
 
-    def raw(self, k, about=0.0):
+    def raw(self, k: int, about: float = 0.0) -> Value:
         """The k-th moment about a point: the mean of ``(x - about)**k``.
 
         Parameters
@@ -311,7 +318,7 @@ class Statistics:
         distance = (units.vector.mean - shift(about, -scale)) + units.vector.rest
         return moved(moments[: k + 1], distance)[k], scale
 
-    def standardized(self, k):
+    def standardized(self, k: int) -> Value:
         """The k-th central moment in units of the standard deviation, m_k / m2**(k / 2).
 
         Returns
@@ -333,7 +340,7 @@ class Statistics:
                 _defined_ratio(moments[k], _half_power(moments[2], k), moments[2]), view
             )
 
-    def cumulant(self, k):
+    def cumulant(self, k: int) -> Value:
         """The k-th cumulant of the readings as they are (divisor W).
 
         Parameters
@@ -365,7 +372,7 @@ class Statistics:
             value = _cumulants.cumulants_from_central(central_moments(view, k)[2:])[k - 2]
             return self._read(shift(value, k * view.vector.scale), view)
 
-    def k_statistic(self, k):
+    def k_statistic(self, k: int) -> Value:
         """Fisher's k-statistic: the unbiased estimate of the k-th cumulant.
 
         Parameters
@@ -401,38 +408,38 @@ class Statistics:
 
     # -- extremes ----------------------------------------------------------------------------
 
-    def minimum(self):
+    def minimum(self) -> Value:
         """The least reading; nan when empty or unknown (after ``remove``)."""
         view = self._view()
         return self._read(view.minimum, view)
 
-    def maximum(self):
+    def maximum(self) -> Value:
         """The greatest reading; nan when empty or unknown (after ``remove``)."""
         view = self._view()
         return self._read(view.maximum, view)
 
     # -- the signal engineer's words ---------------------------------------------------------
 
-    def dc(self):
+    def dc(self) -> Value:
         """The mean, as the constant part of a signal."""
         return self.mean()
 
-    def rms(self):
+    def rms(self) -> Value:
         """The root mean square of the whole signal, constant part included: ``sqrt(raw(2))``."""
         view = self._need(2, "rms()")
         with np.errstate(all="ignore"):
             value, scale = self._about(view, 2, 0.0)
             return self._read(shift(np.sqrt(value), scale), view)
 
-    def ac_rms(self):
+    def ac_rms(self) -> Value:
         """The root mean square of the alternating part: ``std()``."""
         return self.std()
 
-    def power(self):
+    def power(self) -> Value:
         """The mean square of the whole signal: ``raw(2)``."""
         return self.raw(2)
 
-    def crest_factor(self):
+    def crest_factor(self) -> Value:
         """The alternating part's peak over its root mean square.
 
         ``max(maximum - mean, mean - minimum) / ac_rms()``; nan without spread.

@@ -1,5 +1,9 @@
 """The immutable summary of a set of readings: moments, and all that is read off them."""
 
+from __future__ import annotations
+
+from typing import TYPE_CHECKING, Any
+
 import numpy as np
 
 from ..algebra import cumulants as _cumulants
@@ -8,6 +12,13 @@ from ..display.page import table
 from ..display.text import columns, number, one_line
 from .feasibility import violated
 from .readout import Statistics, View
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from numpy.typing import NDArray
+
+    from .readout import Value
 
 _ROWS_SHOWN = 10
 
@@ -54,6 +65,7 @@ class Summary(Statistics):
     """
 
     __slots__ = ("_data",)
+    _data: tuple[View, Any, Any, Any, tuple[str, ...] | None]
 
     def __init__(self):
         raise TypeError(
@@ -103,7 +115,9 @@ class Summary(Statistics):
     # -- making ------------------------------------------------------------------------------
 
     @classmethod
-    def from_central(cls, mean, central, count=None, check=True):
+    def from_central(
+        cls, mean: float, central: Sequence[float], count: int | None = None, check: bool = True
+    ) -> Summary:
         """A summary of a mean and central moments.
 
         Parameters
@@ -149,7 +163,9 @@ class Summary(Statistics):
         return cls._make(view, count=count, omitted=0, effective=effective)
 
     @classmethod
-    def from_raw(cls, raw, count=None, check=True):
+    def from_raw(
+        cls, raw: Sequence[float], count: int | None = None, check: bool = True
+    ) -> Summary:
         """A summary of raw moments (about zero), from the first on.
 
         Raw moments far from zero keep few digits of the spread: central ones keep all.
@@ -167,7 +183,9 @@ class Summary(Statistics):
         return cls.from_central(raw[0], central, count, check)
 
     @classmethod
-    def from_cumulants(cls, cumulants, count=None, check=True):
+    def from_cumulants(
+        cls, cumulants: Sequence[float], count: int | None = None, check: bool = True
+    ) -> Summary:
         """A summary of cumulants, from the first (the mean) on.
 
         Examples
@@ -184,7 +202,7 @@ class Summary(Statistics):
 
     # -- transforming ------------------------------------------------------------------------
 
-    def affine(self, scale=1.0, offset=0.0):
+    def affine(self, scale: float = 1.0, offset: float = 0.0) -> Summary:
         """The summary of ``scale * x + offset``; a negative scale exchanges the extremes.
 
         Examples
@@ -197,7 +215,7 @@ class Summary(Statistics):
         changed = affine_view(view, scale, offset)
         return self._make(changed, count=count, omitted=omitted, effective=effective, names=names)
 
-    def independent_sum(self, other):
+    def independent_sum(self, other: Summary) -> Summary:
         """The moments of X + Y for independent X and Y: their cumulants add.
 
         The result has no count, and the lower of the two orders.  This is not combining two sets
@@ -238,32 +256,32 @@ class Summary(Statistics):
     # -- what it is of -----------------------------------------------------------------------
 
     @property
-    def order(self):
+    def order(self) -> int:
         """The highest moment kept."""
         return self._view().order
 
     @property
-    def shape(self):
+    def shape(self) -> tuple[int, ...]:
         """The shape of one reading."""
         return self._view().shape
 
     @property
-    def names(self):
+    def names(self) -> tuple[str, ...] | None:
         """The names of the channels, a tuple, or None."""
         return self._data[4]
 
     @property
-    def count(self):
+    def count(self) -> int | NDArray[np.int64] | None:
         """Number of readings (for frequencies the sum of the weights), or None."""
         return self._data[1]
 
     @property
-    def omitted(self):
+    def omitted(self) -> int | NDArray[np.int64]:
         """Number of readings left out as missing."""
         return self._data[2]
 
     @property
-    def weight(self):
+    def weight(self) -> Value | None:
         """The sum of the weights, or None where there is no count."""
         view, count, *_ = self._data
         if count is None:
@@ -272,13 +290,13 @@ class Summary(Statistics):
             return self._read(shift(view.vector.weight, view.vector.weight_scale), view)
 
     @property
-    def effective_count(self):
+    def effective_count(self) -> Value | None:
         """Kish's effective number of readings, W**2 / V2 for reliability weights, or None."""
         return self._data[3]
 
     # -- exporting ---------------------------------------------------------------------------
 
-    def as_dict(self):
+    def as_dict(self) -> dict[str, Any]:
         """Plain numbers, ready for JSON.
 
         Returns
@@ -336,18 +354,18 @@ class Summary(Statistics):
         note = f"{hidden} more channels" if hidden > 0 else ""
         return header, rows[:_ROWS_SHOWN], note
 
-    def __str__(self):
+    def __str__(self) -> str:
         header, rows, note = self._table()
         return "\n".join(columns(header, rows) + ([f"... {note}"] if note else []))
 
-    def __repr__(self):
+    def __repr__(self) -> str:
         if self.shape == ():
             names = [n for n in self._known() if n not in ("variance", "minimum", "maximum")]
             fields = [("count", self.count), *((n, getattr(self, n)()) for n in names)]
             return one_line("Summary", fields)
         return one_line("Summary", [("order", self.order), ("shape", str(self.shape))])
 
-    def _repr_html_(self):
+    def _repr_html_(self) -> str:
         header, rows, note = self._table()
         return table(header, rows, note)
 
