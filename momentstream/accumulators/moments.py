@@ -13,7 +13,7 @@ from ..errors import MergeError, NonFiniteError
 from ..statistics.readout import Statistics, View, checked_degree
 from ..statistics.summary import Summary, affine_view, scaled_vector
 from .base import Accumulator
-from .door import Form, pack_numbers, stretches
+from .door import Form, pack_floats, stretches
 from .moments_payload import MOST_COUNTED, WEIGHTS, read_payload, write_payload
 from .rows import removed_rows, rows_of, vector_of
 from .settings import checked_order, checked_shape, choice, finite_array
@@ -168,10 +168,10 @@ class Moments(Accumulator, Statistics):
         >>> ms.Moments().update(range(1, 5)).update(10.0).count
         5
         """
-        if type(values) is float and self._quick and weights is None and values - values == 0.0:
+        if type(values) is float and weights is None and values - values == 0.0 and self._quick:
             pending = self._pending
             pending.append(values)
-            if len(pending) >= _FLUSH:
+            if len(pending) == _FLUSH:
                 self._flush()
             return self
         return self._update(values, weights, threads)
@@ -220,7 +220,7 @@ class Moments(Accumulator, Statistics):
 
     def _flush(self):
         if self._pending:
-            x, _ = pack_numbers(self._pending)
+            x = pack_floats(self._pending)
             self._stream.feed(x, None, None)
             self._pending = []
             self._settled = None
