@@ -125,59 +125,29 @@ def _tile_plain(order, width):
     return sum_tile
 
 
-_make = _tile_plain if PLAIN_PYTHON else _tile_intrinsic
-_wide_2, _single_2 = _make(2, TILE), _make(2, 1)
-_wide_4, _single_4 = _make(4, TILE), _make(4, 1)
-_wide_8, _single_8 = _make(8, TILE), _make(8, 1)
-_wide_16, _single_16 = _make(16, TILE), _make(16, 1)
+_make_tile = _tile_plain if PLAIN_PYTHON else _tile_intrinsic
 
 
-@internal
-def _add_rows_2(x, w, first, last, pivots, sums):
-    keep_apart()
-    channel = 0
-    while channel + TILE <= pivots.size:
-        _wide_2(x, w, first, last, channel, pivots, sums)
-        channel += TILE
-    while channel < pivots.size:
-        _single_2(x, w, first, last, channel, pivots, sums)
-        channel += 1
+def _make_add_rows(order):
+    """Tiles of eight channels as far as they go, then single channels."""
+    wide, single = _make_tile(order, TILE), _make_tile(order, 1)
+
+    @internal
+    def add_rows(x, w, first, last, pivots, sums):
+        keep_apart()
+        channel = 0
+        while channel + TILE <= pivots.size:
+            wide(x, w, first, last, channel, pivots, sums)
+            channel += TILE
+        while channel < pivots.size:
+            single(x, w, first, last, channel, pivots, sums)
+            channel += 1
+
+    return add_rows
 
 
-@internal
-def _add_rows_4(x, w, first, last, pivots, sums):
-    keep_apart()
-    channel = 0
-    while channel + TILE <= pivots.size:
-        _wide_4(x, w, first, last, channel, pivots, sums)
-        channel += TILE
-    while channel < pivots.size:
-        _single_4(x, w, first, last, channel, pivots, sums)
-        channel += 1
-
-
-@internal
-def _add_rows_8(x, w, first, last, pivots, sums):
-    keep_apart()
-    channel = 0
-    while channel + TILE <= pivots.size:
-        _wide_8(x, w, first, last, channel, pivots, sums)
-        channel += TILE
-    while channel < pivots.size:
-        _single_8(x, w, first, last, channel, pivots, sums)
-        channel += 1
-
-
-@internal
-def _add_rows_16(x, w, first, last, pivots, sums):
-    keep_apart()
-    channel = 0
-    while channel + TILE <= pivots.size:
-        _wide_16(x, w, first, last, channel, pivots, sums)
-        channel += TILE
-    while channel < pivots.size:
-        _single_16(x, w, first, last, channel, pivots, sums)
-        channel += 1
+_add_rows_2, _add_rows_4 = _make_add_rows(2), _make_add_rows(4)
+_add_rows_8, _add_rows_16 = _make_add_rows(8), _make_add_rows(16)
 
 
 @internal
