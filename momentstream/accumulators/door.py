@@ -39,15 +39,38 @@ def refuse_type(values):
     return TypeError(f"values must be real numbers, got {name}; {cure}")
 
 
-def split_integers(array):
+class Room:
+    """Working space of one call, used for stretch after stretch: fresh pages cost more than
+    arithmetic."""
+
+    __slots__ = ("_arrays",)
+
+    def __init__(self):
+        self._arrays = {}
+
+    def get(self, name, size, dtype=np.float64):
+        array = self._arrays.get(name)
+        if array is None or len(array) < size or array.dtype != dtype:
+            array = self._arrays[name] = np.empty(size, dtype)
+        return array[:size]
+
+
+def split_integers(array, room):
     """Doubles, and what they leave of 64-bit integers (None where they leave nothing)."""
+    x = room.get("x", len(array))
     if array.dtype.itemsize < 8 or array.dtype.kind not in "iu":
-        return array.astype(np.float64), None
-    upper = (array >> 32).astype(np.float64) * 4294967296.0
-    lower = (array & 0xFFFFFFFF).astype(np.float64)
-    total = upper + lower
-    rest = lower - (total - upper)
-    return total, rest if rest.any() else None
+        np.copyto(x, array)
+        return x, None
+    low, half = room.get("low", len(array)), room.get("half", len(array), array.dtype)
+    np.right_shift(array, 32, out=half)
+    np.multiply(half, 4294967296.0, out=x)
+    np.bitwise_and(array, 0xFFFFFFFF, out=half)
+    np.copyto(low, half)
+    total = room.get("total", len(array))
+    np.add(x, low, out=total)
+    np.subtract(total, x, out=x)
+    np.subtract(low, x, out=low)
+    return total, low if low.any() else None
 
 
 def pack_floats(items):
@@ -70,8 +93,20 @@ def pack_numbers(items):
     try:
         deque(map(float.conjugate, items), maxlen=0)  # the fastest test that all are floats
     except TypeError:
-        return _pack_mixed(items, np.empty(len(items)))
+        packed = _pack_integers(items) if set(map(type, items)) == {int} else None
+        return packed or _pack_mixed(items, np.empty(len(items)))
     return pack_floats(items), None
+
+
+def _pack_integers(items):
+    """A list of Python integers as doubles and second parts, or None where one is too large."""
+    for dtype in (np.int64, np.uint64):
+        try:
+            array = np.array(items, dtype=dtype)
+        except OverflowError:
+            continue
+        return split_integers(array, Room())
+    return None
 
 
 def _pack_mixed(items, x):
@@ -107,7 +142,7 @@ def _regular(values):
         return list(check_dtype(values).ravel()), values.shape
     if not isinstance(values, (list, tuple)):
         return [values], ()
-    if not any(isinstance(item, (list, tuple, np.ndarray)) for item in values):
+    if not any(map(_is_nest, set(map(type, values)))):
         return values, (len(values),)
     flat: list = []
     inner = None
@@ -118,6 +153,10 @@ def _regular(values):
         inner = shape
         flat.extend(part)
     return flat, (len(values), *(inner or ()))
+
+
+def _is_nest(kind):
+    return issubclass(kind, (list, tuple, np.ndarray))
 
 
 def writable(array):
@@ -228,13 +267,12 @@ def _weights_of(weights, n):
             raise TypeError(str(error).replace("values", "weights", 1)) from None
         if mask is not None and mask.any():
             raise ValueError(f"weights must not be missing, one is at {int(np.argmax(mask))}")
-        w = data.astype(np.float64)
-        if w.ndim == 0:
-            return np.full(n, float(w))
-        w = np.ravel(w)
+        if data.ndim == 0:
+            return np.full(n, float(data))
+        w = writable(np.ascontiguousarray(data, dtype=np.float64).reshape(-1))
     if len(w) != n:
         raise ValueError(f"weights must have one entry a reading: {n} readings, {len(w)} weights")
-    return w + 0.0  # -0.0 is zero
+    return w
 
 
 def _array_stretches(data, mask, weights, form):
@@ -249,7 +287,7 @@ def _array_stretches(data, mask, weights, form):
     if as_it_is and mask is None and flags.c_contiguous and flags.aligned and data.dtype.isnative:
         return True, iter([(form.fold(writable(data).reshape(-1)), None, w)])
     if n <= CHUNK and data.size <= STRETCH:
-        x, low = _converted(np.ascontiguousarray(data).reshape(-1), mask)
+        x, low = _converted(np.ascontiguousarray(data).reshape(-1), mask, Room())
         return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
     return False, _converted_stretches(data, mask, w, form, n)
 
@@ -257,6 +295,7 @@ def _array_stretches(data, mask, weights, form):
 def _converted_stretches(data, mask, w, form, n):
     size = form.size or 1
     rows = max(1, STRETCH // size)
+    room = Room()
     done = 0
     kept: list = []
     masks: list = []
@@ -273,7 +312,7 @@ def _converted_stretches(data, mask, w, form, n):
             if mask is not None:
                 gone = np.concatenate(masks) if len(masks) > 1 else masks[0]
             take = flat.size // size * size
-            x, low = _converted(flat[:take], None if gone is None else gone[:take])
+            x, low = _converted(flat[:take], None if gone is None else gone[:take], room)
             count = take // size
             part_w = None if w is None else w[done : done + count]
             yield form.fold(x), None if low is None else form.fold(low), part_w
@@ -302,11 +341,11 @@ def _pieces(data, mask):
             yield part, None if mask is None else mask[start : start + rows].reshape(-1)
 
 
-def _converted(flat, mask):
+def _converted(flat, mask, room):
     """Doubles and second parts of a flat array in any dtype; masked entries become NaN."""
     if not flat.dtype.isnative:
         flat = flat.astype(flat.dtype.newbyteorder("="))
-    x, low = split_integers(flat)
+    x, low = split_integers(flat, room)
     if mask is not None:
         x[mask] = np.nan
         if low is not None:
@@ -359,13 +398,14 @@ def _frame_stretches(values, weights, form):
 
     def read():
         rows = max(1, STRETCH // max(1, len(columns)))
+        room = Room()
         for start in range(0, n, rows):
             stop = min(start + rows, n)
             x = np.empty((stop - start, len(columns)))
             low = None
             for j, (data, mask) in enumerate(columns):
                 part_mask = None if mask is None else mask[start:stop]
-                x[:, j], rest = _converted(data[start:stop], part_mask)
+                x[:, j], rest = _converted(data[start:stop], part_mask, room)
                 if rest is not None:
                     if low is None:
                         low = np.zeros_like(x)

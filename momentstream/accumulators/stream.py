@@ -96,6 +96,13 @@ class Stream:
         return self.weights is not None
 
     @property
+    def _policy(self):
+        """The kernels' policy."""
+        if self.policy == "raise" and not self.weighted:
+            return None
+        return POLICIES.index(self.policy)
+
+    @property
     def whole(self):
         return self.weights == "frequency"
 
@@ -161,7 +168,7 @@ class Stream:
         self.low = None
 
     def _take(self, x, low, w, table, blocks, tally, extremes, offset):
-        policy, whole = POLICIES.index(self.policy), self.whole
+        policy, whole = self._policy, self.whole
         if self.channels is not None:
             after = _channels.take_row_blocks(
                 x, low, w, self.rows, policy, whole, self.order, table, blocks, tally, extremes
@@ -294,15 +301,15 @@ class Stream:
         part = x[start:stop]
         tally = np.zeros(4, np.int64)
         part_w = None if w is None else w[start:stop]
-        policy = POLICIES.index(self.policy)
+        finite = self.policy == "raise"
         if self.channels is None:
             if part.dtype == np.float32:
                 part = part.astype(np.float64)
-            good = _blocks.first_refused(part, part_w, policy, self.whole, tally)
+            good = _blocks.first_refused(part, part_w, finite, self.whole, tally)
         else:
             repeated = None if part_w is None else np.repeat(part_w, self.channels)
             flat = np.ascontiguousarray(part).reshape(-1)
-            good = _blocks.first_refused(flat, repeated, policy, self.whole, tally)
+            good = _blocks.first_refused(flat, repeated, finite, self.whole, tally)
             if not good:
                 row, column = divmod(int(tally[_blocks.POSITION]), self.channels)
                 refuse(int(tally[_blocks.REFUSED]), start + row, column, part[row, column],
@@ -348,8 +355,7 @@ class Stream:
                 self.w[:fill] if weighted else None,
             )
             take = _blocks.take_block if self.channels is None else _channels.take_row_block
-            policy = POLICIES.index(self.policy)
-            take(*part, policy, self.whole, self.order, table, tally, extremes)
+            take(*part, self._policy, self.whole, self.order, table, tally, extremes)
         elif self.blocks == 0:
             return Settled(table[..., 0, :].copy(), tally, extremes)
         else:

@@ -9,7 +9,7 @@ import math
 
 import numpy as np
 
-from .compiling import compiled, copy_eight, internal, keep_apart
+from .compiling import REORDER, compiled, copy_eight, internal, keep_apart
 from .reduction import (
     ZERO,
     all_finite,
@@ -37,7 +37,7 @@ from .vector import (
 BLOCK = 8192
 GROUP_LEVEL = 6
 GROUP = 1 << GROUP_LEVEL  # blocks a thread takes at a time
-RAISE, OMIT, PROPAGATE = 0, 1, 2
+RAISE, OMIT, PROPAGATE = 0, 1, 2  # policies; None: refuse, for streams without weights
 COUNT, OMITTED, REFUSED, POSITION = 0, 1, 2, 3  # places in a tally
 TALLY = 4
 # What may be refused: a reading that is not finite; a weight that is negative or not finite; a
@@ -92,9 +92,25 @@ def extend(extremes, least, most):
         extremes[1] = most + 0.0
 
 
+@internal(fastmath=REORDER)
+def _fractions(w):
+    """What whole numbers would leave: zero, if all weights are whole and finite."""
+    total = 0.0
+    for i in range(w.size):
+        total += abs(w[i] - math.floor(w[i]))
+    return total
+
+
 @internal
 def check_weights(w, whole, tally):
     """Refuse a weight that cannot be one; whether all are good."""
+    keep_apart()
+    if whole and _fractions(w) == 0.0:
+        least, most = w[0], w[0]
+        for i in range(w.size):
+            least, most = min(least, w[i]), max(most, w[i])
+        if least >= 0.0 and most <= _MOST_FREQUENT:
+            return True
     for i in range(w.size):
         if not 0.0 <= w[i] < np.inf:
             tally[REFUSED] = WEIGHT
@@ -112,6 +128,7 @@ def check_weights(w, whole, tally):
 @internal
 def count_readings(w, n, whole):
     """How many readings: their number, or for frequencies (``whole``) the sum of the weights."""
+    keep_apart()
     if w is None:
         return n
     total = ZERO
@@ -205,6 +222,7 @@ def sweep_gapped(x, order, room, row, whole_row):
 @internal
 def _take_clean(x, low, w, swept, whole, order, table, tally, extremes, room, row, by_rows):
     """Reduce and count a block; False, and nothing done, where it has gaps or bad weights."""
+    keep_apart()
     if w is not None and whole and not check_weights(w, whole, tally):
         return False
     if low is None:
@@ -217,7 +235,12 @@ def _take_clean(x, low, w, swept, whole, order, table, tally, extremes, room, ro
         sweep(x, w, order, room, row, by_rows)
         clean = finish_block(x, None, w, order, table, room, row, by_rows)
     if clean:
-        add_count(tally, COUNT, count_readings(w, x.size, whole) if whole else x.size)
+        count = np.int64(x.size)
+        if w is not None and whole:
+            # Sums of whole numbers below 2**53 are exact.
+            exact = room[row, 0] < _MOST_FREQUENT
+            count = np.int64(room[row, 0]) if exact else count_readings(w, x.size, whole)
+        add_count(tally, COUNT, count)
         extend(extremes, room[row, LEAST], room[row, MOST])
     return clean
 
@@ -275,25 +298,47 @@ def _take_gapped(x, low, w, policy, whole, order, table, tally, extremes, room, 
 
 
 @internal
+def _refuse_reading(x, tally):
+    tally[REFUSED] = READING
+    for i in range(x.size):
+        if not is_finite(x[i]):
+            tally[POSITION] = i
+            break
+    return False
+
+
+@internal
+def _take_rest(x, low, w, policy, whole, order, table, tally, extremes, room, row, by_rows):
+    """What ``_take_clean`` left: refused where the policy is None, so that kernels for streams
+    without gaps, the most common ones, compile without all that gaps need."""
+    if policy is None:
+        return _refuse_reading(x, tally)
+    return _take_gapped(x, low, w, policy, whole, order, table, tally, extremes, room, row, by_rows)
+
+
+@internal
 def take_part(x, low, w, swept, policy, whole, order, table, tally, extremes, room, row, by_rows):
     """Row NEW becomes the vector of one block; ``swept``: ``room[row]`` holds its first sweep."""
     if _take_clean(x, low, w, swept, whole, order, table, tally, extremes, room, row, by_rows):
         return True
     if tally[REFUSED] != 0:
         return False
-    return _take_gapped(x, low, w, policy, whole, order, table, tally, extremes, room, row, by_rows)
+    return _take_rest(x, low, w, policy, whole, order, table, tally, extremes, room, row, by_rows)
 
 
 @compiled
-def first_refused(x, w, policy, whole, tally):
-    """Look for what would be refused, and note it in ``tally``; whether there is none."""
-    if w is not None and not check_weights(w, whole, tally):
+def first_refused(x, w, finite, whole, tally):
+    """Look for what would be refused, and note it in ``tally``; whether there is none.
+
+    ``finite``: readings of weight must be.
+    """
+    if w is None:
+        return not finite or all_finite(x) or _refuse_reading(x, tally)
+    if not check_weights(w, whole, tally):
         return False
-    if policy == RAISE and not all_finite(x):
+    if finite and not all_finite(x):
         for i in range(x.size):
-            if not is_finite(x[i]):
-                if w is not None and w[i] == 0.0:
-                    continue
+            if w[i] > 0.0 and not is_finite(x[i]):
                 tally[REFUSED] = READING
                 tally[POSITION] = i
                 return False
@@ -350,7 +395,7 @@ def take_blocks(x, low, w, policy, whole, order, table, blocks, tally, extremes)
                     None,
                 )
             if not taken and tally[REFUSED] == 0:
-                taken = _take_gapped(
+                taken = _take_rest(
                     part,
                     low_part,
                     w_part,

@@ -184,6 +184,7 @@ def find_pivot(x, low, scale, order, by_rows):
     Readings from all over the block would guess better where they drift, but fetching them ahead
     of the sweep doubled its time: the second sweep that drift costs runs from the cache instead.
     """
+    keep_apart()
     head = x[: HEAD_ROWS if by_rows is not None else _HEAD_UPPER if order > 8 else _HEAD]
     if low is None and scale == 0:
         return x[0] + head_distance(head, x[0], by_rows), 0.0
@@ -207,6 +208,7 @@ def sweep(x, w, order, room, row, by_rows):
     Apart from ``finish_block`` so that several blocks can be swept before any is finished: the
     memory then keeps streaming.
     """
+    keep_apart()
     pivot, _ = find_pivot(x, None, ZERO, order, by_rows)
     room[row, PIVOT] = pivot
     add_up(x, w, pivot, order, room, row, by_rows)
@@ -243,6 +245,7 @@ def _tolerance(order):
 @internal
 def write_vector(w, order, table, room, row, pivot_rest, scale, weight_scale):
     """Row NEW becomes the moment vector of the sums in ``room[row]``."""
+    keep_apart()
     error = room[row, 1] / room[row, 0]
     mean, rest = two_sum(room[row, PIVOT], pivot_rest + error)
     for k in range(order + 1):
@@ -268,6 +271,7 @@ def finish_block(x, low, w, order, table, room, row, by_rows):
     ``room[row]`` holds what ``sweep`` found (readings in two parts take their first sweep here).
     Returns False, with row NEW untouched, where a reading is not finite or a weight not positive.
     """
+    keep_apart()
     pivot_rest, scale, weight_scale = 0.0, ZERO, ZERO
     if low is not None or not settled_by_sweep(w, order, room, row):
         if not is_finite(room[row, order]) or low is not None:

@@ -173,6 +173,7 @@ def _sums_upper(x, pivot, room, row):
 
 @internal
 def power_sums(x, pivot, order, room, row):
+    keep_apart()
     room[row, 0] = x.size
     if order <= 2:
         _sums_2(x, pivot, room, row)
@@ -277,6 +278,7 @@ def _weighted_sums_upper(x, w, pivot, base, room, row):
 
 @internal
 def weighted_power_sums(x, w, pivot, order, room, row):
+    keep_apart()
     _weighted_sums_4(x, w, pivot, room, row)
     if order > 4:
         _weighted_sums_upper(x, w, pivot, _FIRST_UPPER, room, row)

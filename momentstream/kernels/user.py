@@ -61,15 +61,17 @@ def add_block(vector, readings):
     """
     order = vector.size - 4
     table = np.zeros((LEVELS, vector.size))
-    table[BASE] = vector
+    for i in range(vector.size):
+        table[BASE, i] = vector[i]
     tally = np.zeros(TALLY, np.int64)
     extremes = np.zeros(2)
     for start in range(0, readings.size, BLOCK):
         part = readings[start : start + BLOCK]
-        if not take_block(part, None, None, RAISE, False, order, table, tally, extremes):
+        if not take_block(part, None, None, None, False, order, table, tally, extremes):
             raise ValueError("readings must be finite")
         combine_rows(table, BASE, NEW, order, False)
-    vector[:] = table[BASE]
+    for i in range(vector.size):
+        vector[i] = table[BASE, i]
 
 
 @compiled
@@ -127,14 +129,14 @@ def warm_up():
     """
     x = np.arange(2.0 * BLOCK)
     tally, extremes = np.zeros(TALLY, np.int64), np.zeros(2)
-    for w in (None, x + 1.0):
+    for w, policy in ((None, None), (x + 1.0, RAISE)):
         table = np.zeros((rows_for(2), 8 if w is None else 12))
-        blocks = take_blocks(x, None, w, RAISE, False, 4, table, 0, tally, extremes)
-        take_block(
-            x[:9], None, None if w is None else w[:9], RAISE, False, 4, table, tally, extremes
-        )
-        first_refused(x, w, RAISE, False, tally)
+        blocks = take_blocks(x, None, w, policy, False, 4, table, 0, tally, extremes)
+        part_w = None if w is None else w[:9]
+        take_block(x[:9], None, part_w, policy, False, 4, table, tally, extremes)
+        first_refused(x, w, True, False, tally)
         fold_levels(table, blocks, 4, w is not None)
         combine_pair(table[BASE], table[NEW], 4, w is not None)
-    single_sums_agree(x, x.astype(np.float32), 4)
-    take_blocks_32(x.astype(np.float32), RAISE, 4, table[:, :8].copy(), 0, tally, extremes)
+    narrow = x.astype(np.float32)
+    single_sums_agree(x, narrow, 4)
+    take_blocks_32(narrow, None, 4, table[:, :8].copy(), 0, tally, extremes)

@@ -155,6 +155,7 @@ def _extent(table, row):
 @internal
 def to_plain_scale(table, row, order, weighted):
     """Go back to scale 0 (each of the two) where that is safe: units depend on content alone."""
+    keep_apart()
     scale = table[row, SCALE]
     weight_scale = _weight_scale(table, row, order, weighted)
     if weight_scale != 0.0:
@@ -221,6 +222,7 @@ def _combine_not_finite(table, a, b, order, weighted):
 @internal
 def combine_rows(table, a, b, order, weighted):
     """Row a takes row b in; row b stays.  Rows LEFT, RIGHT and SPARE are used on the way."""
+    keep_apart()
     if table[b, SUMS] == 0.0:
         return
     if table[a, SUMS] == 0.0:
@@ -246,6 +248,7 @@ def insert_block(table, blocks, level, order, weighted):
 
     ``blocks`` counts the blocks before it.  Returns the count after it.
     """
+    keep_apart()
     after = blocks + (1 << level)
     while (blocks >> level) & 1:
         combine_rows(table, NEW, LEVELS + level, order, weighted)
@@ -280,16 +283,20 @@ def insert_group(table, blocks, level, order, weighted):
 def settle_units(row, order, weighted):
     """``to_plain_scale`` of a vector that stands alone."""
     table = np.empty((1, row.size))
-    table[0] = row
+    for i in range(row.size):
+        table[0, i] = row[i]
     to_plain_scale(table, np.int64(0), order, weighted)
-    row[:] = table[0]
+    for i in range(row.size):
+        row[i] = table[0, i]
 
 
 @compiled
 def combine_pair(a, b, order, weighted):
     """Row 0 of ``a`` takes row 0 of ``b`` in: two accumulators' settled vectors."""
     table = np.empty((LEVELS, a.shape[0]))
-    table[BASE] = a
-    table[NEW] = b
+    for i in range(a.size):
+        table[BASE, i] = a[i]
+        table[NEW, i] = b[i]
     combine_rows(table, BASE, NEW, order, weighted)
-    a[:] = table[BASE]
+    for i in range(a.size):
+        a[i] = table[BASE, i]
