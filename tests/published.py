@@ -111,11 +111,12 @@ class Reference(Exact):
         super().__init__(readings, weights, order)
         self.kind = kind
         self.count = self.weight if kind == "frequency" else len(self.readings)
-        self._absolute = {}
+        self._equal_weights = weights is None
+        self._known = {}
 
     def value(self, name):
         """The exact statistic, a Fraction; "undefined" where there is none."""
-        return self._value(name, self.central, signed=True)
+        return self._kept(name, lambda: self._value(name, self.central, signed=True))
 
     def size(self, name):
         """The statistic with every sum taken of absolute values and every minus made a plus.
@@ -123,7 +124,14 @@ class Reference(Exact):
         Each operation in doubles is off by half a unit of its last place at most, so this is what
         errors in the statistic are measured in.
         """
-        return self._value(name, self.absolute_central, signed=False)
+        return self._kept(
+            f"size of {name}", lambda: self._value(name, self.absolute_central, signed=False)
+        )
+
+    def _kept(self, name, compute):
+        if name not in self._known:
+            self._known[name] = compute()
+        return self._known[name]
 
     @property
     def weight_ratios(self):
@@ -133,14 +141,12 @@ class Reference(Exact):
         """The mean of abs(x - mean)**k, exactly."""
         if k % 2 == 0:
             return self.central(k)
-        if k not in self._absolute:
-            self._absolute[k] = self._absolute_central(k)
-        return self._absolute[k]
+        return self._kept(f"absolute {k}", lambda: self._absolute_central(k))
 
     def _absolute_central(self, k):
         center = self.mean / self.unit
         above, below = center.numerator, center.denominator
-        if all(w == 1 for w in self.weights):
+        if self._equal_weights:
             total = sum(abs(below * x - above) ** k for x in self.readings)
         else:
             pairs = zip(self.weights, self.readings, strict=True)

@@ -176,7 +176,7 @@ def test_removing(order, offset, share):
     gone = int(n * share)
     total = ms.Moments(order).update(x)
     left = total.copy().remove(ms.Moments(order).update(x[:gone]))
-    assert left.count == n - gone
+    assert left.count == left.weight == left.effective_count == n - gone
     assert math.isnan(left.minimum())
     assert math.isnan(left.maximum())
     # The error is 64 units relative to the power sums of the total, moved to the mean that stays.
@@ -188,6 +188,12 @@ def test_removing(order, offset, share):
     # The mean of the rest carries the total's error, divided by the rest's share.
     allowed = Fraction(math.ulp(left.mean())) + 64 * U * Fraction(whole.absolute(1)) / (n - gone)
     assert abs(Fraction(left.mean()) - exact.mean) <= allowed
+    assert left.variance(ddof=1) == pytest.approx(left.variance() * left.count / (left.count - 1))
+    # Taken in again, it weighs what it weighed.
+    again = left.merge(ms.Moments(order).update(x[:gone]))
+    assert again.count == n
+    allowed = Fraction(math.ulp(again.mean())) + 64 * U * Fraction(whole.absolute(1)) / n
+    assert abs(Fraction(again.mean()) - whole.mean) <= allowed
 
 
 # -- weights ------------------------------------------------------------------------------------

@@ -32,11 +32,11 @@ LINES = "lines of a table of frequencies; Moments counts the readings they stand
 
 # What Moments alone cannot give.  Covariances of a variable with itself are taken as variances.
 NOT_TAKEN = {
-    **{(case, "autocorr1"): NEIGHBOURS for case in CASES if f"{case}-".startswith("strd-l")},
+    **{
+        (f"strd-{name}", "autocorr1"): NEIGHBOURS
+        for name in ("lew", "lottery", "mavro", "michelso", "pidigits")
+    },
     **{(f"strd-numacc{i}", "autocorr1"): NEIGHBOURS for i in (1, 2, 3, 4)},
-    ("strd-mavro", "autocorr1"): NEIGHBOURS,
-    ("strd-michelso", "autocorr1"): NEIGHBOURS,
-    ("strd-pidigits", "autocorr1"): NEIGHBOURS,
     ("gum-h2", "corr"): TWO_VARIABLES,
     ("cork-mardia", "cov of two"): TWO_VARIABLES,
     ("cork-mardia", "mardia_b1p"): TWO_VARIABLES,

@@ -9,7 +9,7 @@ import math
 
 import numpy as np
 
-from .compiling import REORDER, compiled, copy_eight, internal, keep_apart
+from .compiling import REORDER, compiled, copy_eight, internal, keep_apart, ldexp
 from .reduction import (
     ZERO,
     all_finite,
@@ -74,7 +74,7 @@ def poison_block(x, w, order, table):
     place = SUMS + order + 1
     table[NEW, place] = weight_scale
     for i in range(x.size):
-        part = math.ldexp(w[i], -weight_scale)
+        part = ldexp(w[i], int(-weight_scale))
         table[NEW, SUMS] += part
         power = part
         for j in range(1, 4):

@@ -3,9 +3,11 @@
 With ``NUMBA_DISABLE_JIT=1`` every kernel is plain Python, and the hint does nothing.
 """
 
+import math
 from typing import Any
 
 import numba
+import numpy as np
 from llvmlite import ir
 from numba.core import types
 from numba.extending import intrinsic
@@ -14,10 +16,15 @@ from numba.extending import intrinsic
 REORDER = {"reassoc", "contract", "nsz"}
 
 
+PLAIN_PYTHON = bool(vars(numba.config)["DISABLE_JIT"])
+
+
 def compiled(function=None, **options):
     """``numba.njit`` without the interpreter lock, cached on disk where a folder is writable."""
     if function is None:
         return lambda function: compiled(function, **options)
+    if PLAIN_PYTHON:
+        return np.errstate(all="ignore")(function)
     options.setdefault("error_model", "numpy")
     try:
         return numba.njit(nogil=True, cache=True, **options)(function)
@@ -84,12 +91,15 @@ keep_apart: Any
 copy_eight: Any
 lesser: Any
 greater: Any
-PLAIN_PYTHON = bool(vars(numba.config)["DISABLE_JIT"])
 
 if PLAIN_PYTHON:
 
     def _nothing():
         """Nothing, in plain Python."""
+
+    def ldexp(value, exponent):
+        """value * 2**exponent; infinite where ``math.ldexp`` would raise."""
+        return float(np.ldexp(value, int(exponent)))
 
     def _copy_eight_plainly(source, place, target, to):
         """Copy eight readings; whether all are finite."""
@@ -99,6 +109,7 @@ if PLAIN_PYTHON:
 
     keep_apart, copy_eight, lesser, greater = _nothing, _copy_eight_plainly, min, max
 else:
+    ldexp = math.ldexp
     copy_eight = _copy_eight
     # Extremes that vectorise: they say nothing where a NaN takes part (the sums show that one).
     lesser, greater = _selection("<"), _selection(">")

@@ -9,13 +9,11 @@ where there are none); ``w`` are weights or None.  Numba compiles each combinati
 ``by_rows`` is None for a stream, anything else for one channel of many.
 """
 
-import math
-
 import numpy as np
 from numba.core import types
 from numba.extending import overload
 
-from .compiling import REORDER, internal, keep_apart
+from .compiling import REORDER, internal, keep_apart, ldexp
 from .sums import LEAST, LIGHTEST, MOST, PIVOT, POWERS, power_sums, weighted_power_sums
 from .tiles import column_sums
 from .vector import (
@@ -94,7 +92,7 @@ def all_equal(low):
 def factors_of(scale):
     """Two factors that together are 2**-scale: one alone could overflow."""
     half = -scale // 2
-    return math.ldexp(1.0, half), math.ldexp(1.0, -scale - half)
+    return ldexp(1.0, int(half)), ldexp(1.0, int(-scale - half))
 
 
 @internal
@@ -321,7 +319,7 @@ def _sweep_again(x, low, w, order, room, row, by_rows):
             weight_scale = exponent(heaviest)
             weights = np.empty(n)
             for i in range(n):
-                weights[i] = math.ldexp(w[i], -weight_scale)
+                weights[i] = ldexp(w[i], int(-weight_scale))
             swept = False
     constant = least == most
     if low is not None:

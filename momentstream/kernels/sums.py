@@ -16,12 +16,14 @@ sweeps took 1.6 times as long.  A NaN or an infinity among the readings shows in
 
 import numpy as np
 
-from .compiling import REORDER, greater, internal, keep_apart, lesser
+from .compiling import PLAIN_PYTHON, REORDER, greater, internal, keep_apart, lesser
 
 POWERS, PIVOT, LEAST, MOST, LIGHTEST = 17, 22, 23, 24, 25
 ROOM = 26
 _FIRST_UPPER, _SECOND_UPPER = np.int64(4), np.int64(10)
-STRETCH = 512  # readings added up in one sweep: 4096 at once lost 70 to 96 units on two-point data
+# Readings added up in one go: compiled, they go to many sums side by side; 4096 at once lost 70 to
+# 96 units on two-point data.
+STRETCH = 32 if PLAIN_PYTHON else 512
 
 
 @internal(fastmath=REORDER)

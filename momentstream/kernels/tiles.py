@@ -16,9 +16,10 @@ from numba.extending import intrinsic
 
 from .compiling import PLAIN_PYTHON, REORDER, internal, keep_apart
 from .sums import LEAST, LIGHTEST, MOST, POWERS
+from .vector import two_sum
 
 TILE = 8
-STRETCH_ROWS = 64  # rows added up before they go to the totals
+STRETCH_ROWS = 32  # rows added up before they go to the totals
 
 
 def _powers(order):
@@ -181,7 +182,7 @@ def row_sums(x, w, pivots, sums, part):
     most = sums.shape[0] - 1
     flat = x.reshape(x.size)
     # A part of the block that stays in the cache between fetching and adding.
-    rows = STRETCH_ROWS if channels <= 256 else STRETCH_ROWS // 8
+    rows = STRETCH_ROWS if channels <= 256 else STRETCH_ROWS // 4
     for j in range(channels):
         for k in range(1, most):
             sums[k, j] = part[k, j] = 0.0
@@ -205,14 +206,17 @@ def row_sums(x, w, pivots, sums, part):
 def weight_sums(w, room, row):
     """The sums of w, w**2, w**3, w**4 and the least weight, in ``sums.power_sums``' places."""
     lightest = np.inf
-    s1 = s2 = s3 = s4 = 0.0
+    # The weight divides every channel's sum: it is added up with what each rounding leaves.
+    s1 = rest = s2 = s3 = s4 = 0.0
     for i in range(w.size):
         square = w[i] * w[i]
-        s1 += w[i]
+        s1, left = two_sum(s1, w[i])
+        rest += left
         s2 += square
         s3 += square * w[i]
         s4 += square * square
         lightest = min(lightest, w[i])
+    s1 += rest
     room[row, 0] = s1
     room[row, POWERS + 2] = s2
     room[row, POWERS + 3] = s3

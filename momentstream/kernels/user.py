@@ -14,7 +14,7 @@ from .blocks import (
     take_blocks,
     take_blocks_32,
 )
-from .compiling import compiled
+from .compiling import compiled, ldexp
 from .vector import (
     BASE,
     LEVELS,
@@ -87,13 +87,13 @@ def mean(vector):
     """The mean; nan when empty."""
     if vector[SUMS] == 0.0:
         return math.nan
-    return math.ldexp(vector[MEAN] + vector[REST], int(vector[SCALE]))
+    return ldexp(vector[MEAN] + vector[REST], int(vector[SCALE]))
 
 
 @compiled
 def variance(vector):
     """The population variance, M2 / W; nan when empty."""
-    return math.ldexp(vector[SUMS + 2] / vector[SUMS], int(2 * vector[SCALE]))
+    return ldexp(vector[SUMS + 2] / vector[SUMS], int(2 * vector[SCALE]))
 
 
 @compiled

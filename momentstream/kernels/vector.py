@@ -22,7 +22,7 @@ import math
 
 import numpy as np
 
-from .compiling import compiled, internal, keep_apart
+from .compiling import compiled, internal, keep_apart, ldexp
 
 MEAN, REST, SCALE, SUMS = 0, 1, 2, 3
 # Rows of a table: the levels of the block tree come last, as many as there are.  NumPy integers:
@@ -128,8 +128,8 @@ def rescale(table, row, order, weighted, scale, weight_scale):
     """Express a row in other units; exact but where a value leaves the range of doubles."""
     keep_apart()
     by = np.int64(table[row, SCALE] - scale)
-    table[row, MEAN] = math.ldexp(table[row, MEAN], by)
-    table[row, REST] = math.ldexp(table[row, REST], by)
+    table[row, MEAN] = ldexp(table[row, MEAN], int(by))
+    table[row, REST] = ldexp(table[row, REST], int(by))
     table[row, SCALE] = scale
     by_weight = np.int64(0)
     if weighted:
@@ -137,9 +137,9 @@ def rescale(table, row, order, weighted, scale, weight_scale):
         by_weight = np.int64(table[row, first] - weight_scale)
         table[row, first] = weight_scale
         for j in range(1, 4):
-            table[row, first + j] = math.ldexp(table[row, first + j], (j + 1) * by_weight)
+            table[row, first + j] = ldexp(table[row, first + j], int((j + 1) * by_weight))
     for k in range(order + 1):
-        table[row, SUMS + k] = math.ldexp(table[row, SUMS + k], k * by + by_weight)
+        table[row, SUMS + k] = ldexp(table[row, SUMS + k], int(k * by + by_weight))
 
 
 @internal
@@ -159,13 +159,13 @@ def to_plain_scale(table, row, order, weighted):
     scale = table[row, SCALE]
     weight_scale = _weight_scale(table, row, order, weighted)
     if weight_scale != 0.0:
-        plain = math.ldexp(table[row, SUMS], int(weight_scale))
+        plain = ldexp(table[row, SUMS], int(weight_scale))
         if SMALLEST_WEIGHT < plain < LARGEST_WEIGHT:
             rescale(table, row, order, weighted, scale, 0.0)
             weight_scale = 0.0
     if scale != 0.0:
-        top = math.ldexp(table[row, SUMS + order], int(order * scale))
-        if SMALLEST < top < LARGEST and is_finite(math.ldexp(table[row, MEAN], int(scale))):
+        top = ldexp(table[row, SUMS + order], int(order * scale))
+        if SMALLEST < top < LARGEST and is_finite(ldexp(table[row, MEAN], int(scale))):
             rescale(table, row, order, weighted, 0.0, weight_scale)
 
 
@@ -194,8 +194,8 @@ def _combine_in_common_units(table, a, b, order, weighted):
 def _combine_not_finite(table, a, b, order, weighted):
     """Propagation: a NaN or an infinity among the readings, by the rules of IEEE addition."""
     keep_apart()
-    mean = math.ldexp(table[a, MEAN], int(table[a, SCALE])) * 1.0
-    other = math.ldexp(table[b, MEAN], int(table[b, SCALE])) * 1.0
+    mean = ldexp(table[a, MEAN], int(table[a, SCALE])) * 1.0
+    other = ldexp(table[b, MEAN], int(table[b, SCALE])) * 1.0
     # Only what is not finite decides; two large finite means must not make an infinity.
     if is_finite(mean):
         mean = other
