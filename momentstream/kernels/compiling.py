@@ -90,6 +90,8 @@ def _selection(comparison):
 keep_apart: Any
 copy_eight: Any
 lesser: Any
+extended: Any
+ldexp: Any
 greater: Any
 
 if PLAIN_PYTHON:
@@ -107,9 +109,17 @@ if PLAIN_PYTHON:
         target[to : to + 8] = eight
         return all(value - value == 0.0 for value in eight.tolist())
 
+    # One sum at a time where compiled code has dozens side by side: wider, to be as accurate.
+    extended = np.longdouble
     keep_apart, copy_eight, lesser, greater = _nothing, _copy_eight_plainly, min, max
 else:
     ldexp = math.ldexp
+
+    @numba.njit
+    def extended(value):
+        """The value as it is."""
+        return value
+
     copy_eight = _copy_eight
     # Extremes that vectorise: they say nothing where a NaN takes part (the sums show that one).
     lesser, greater = _selection("<"), _selection(">")

@@ -16,14 +16,12 @@ sweeps took 1.6 times as long.  A NaN or an infinity among the readings shows in
 
 import numpy as np
 
-from .compiling import PLAIN_PYTHON, REORDER, greater, internal, keep_apart, lesser
+from .compiling import REORDER, extended, greater, internal, keep_apart, lesser
 
 POWERS, PIVOT, LEAST, MOST, LIGHTEST = 17, 22, 23, 24, 25
 ROOM = 26
 _FIRST_UPPER, _SECOND_UPPER = np.int64(4), np.int64(10)
-# Readings added up in one go: compiled, they go to many sums side by side; 4096 at once lost 70 to
-# 96 units on two-point data.
-STRETCH = 32 if PLAIN_PYTHON else 512
+STRETCH = 512  # readings added up in one sweep: 4096 at once lost 70 to 96 units on two-point data
 
 
 @internal(fastmath=REORDER)
@@ -37,7 +35,7 @@ def _sums_2(x, pivot, room, row):
         least, most = np.inf, -np.inf
         for i in range(part.size):
             value = part[i]
-            d = value - pivot
+            d = extended(value - pivot)
             least = lesser(value, least)
             most = greater(value, most)
             s1 += d
@@ -63,7 +61,7 @@ def _sums_4(x, pivot, room, row):
         least, most = np.inf, -np.inf
         for i in range(part.size):
             value = part[i]
-            d = value - pivot
+            d = extended(value - pivot)
             least = lesser(value, least)
             most = greater(value, most)
             d2 = d * d
@@ -96,7 +94,7 @@ def _sums_8(x, pivot, room, row):
         least, most = np.inf, -np.inf
         for i in range(part.size):
             value = part[i]
-            d = value - pivot
+            d = extended(value - pivot)
             least = lesser(value, least)
             most = greater(value, most)
             d2 = d * d
@@ -141,7 +139,7 @@ def _sums_upper(x, pivot, room, row):
         part = x[start : min(start + STRETCH, x.size)]
         s9 = s10 = s11 = s12 = s13 = s14 = s15 = s16 = 0.0
         for i in range(part.size):
-            d = part[i] - pivot
+            d = extended(part[i] - pivot)
             d2 = d * d
             d3 = d2 * d
             d4 = d2 * d2
@@ -201,7 +199,7 @@ def _weighted_sums_4(x, w, pivot, room, row):
         light = np.inf
         for i in range(part.size):
             value = part[i]
-            d = value - pivot
+            d = extended(value - pivot)
             least = lesser(value, least)
             most = greater(value, most)
             q = weight[i]
@@ -252,7 +250,7 @@ def _weighted_sums_upper(x, w, pivot, base, room, row):
         weight = w[start : min(start + STRETCH, x.size)]
         s1 = s2 = s3 = s4 = s5 = s6 = 0.0
         for i in range(part.size):
-            d = part[i] - pivot
+            d = extended(part[i] - pivot)
             d2 = d * d
             d4 = d2 * d2
             lift = weight[i] * d4
