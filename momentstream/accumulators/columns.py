@@ -8,6 +8,8 @@ import sys
 
 import numpy as np
 
+from .conversion import refuse_type
+
 
 def origin(value):
     """The package a value's type comes from."""
@@ -32,6 +34,14 @@ def check_dtype(array):
     raise TypeError(f"values must be real numbers of at most 64 bits, got dtype {name}; {cure}")
 
 
+# What columns of other libraries call the types that are taken.
+_REAL_TYPES = {
+    *("bool", "boolean", "null"),
+    *("int8", "int16", "int32", "int64", "uint8", "uint16", "uint32", "uint64"),
+    *("halffloat", "float16", "float", "float32", "double", "float64"),
+}
+
+
 def read_column(values):
     """An array of real numbers, and a mask of what is missing (or None).
 
@@ -46,21 +56,21 @@ def read_column(values):
     if masked is not None and isinstance(values, masked.MaskedArray):
         mask = masked.getmask(values)
         return check_dtype(masked.getdata(values)), None if mask is masked.nomask else mask
-    if package == "pandas":
+    if package == "pandas" and hasattr(values, "dtype"):
         return _read_pandas(values)
-    if package == "polars":
-        return _read_nullable(values, values.null_count, "is_null", {})
-    if package == "pyarrow":
-        return _read_nullable(
-            values, lambda: values.null_count, "is_null", {"zero_copy_only": False}
-        )
+    if package == "polars" and hasattr(type(values), "dtype"):
+        return _read_nullable(values, values.dtype, values.null_count())
+    if package == "pyarrow" and hasattr(values, "null_count"):
+        return _read_nullable(values, values.type, values.null_count)
+    if package in ("pandas", "polars", "pyarrow"):
+        raise refuse_type(values)
     return check_dtype(np.asarray(values)), None
 
 
 def _read_pandas(values):
-    dtype = getattr(values, "dtype", None)
+    dtype = values.dtype
     if isinstance(dtype, np.dtype):
-        return check_dtype(values.to_numpy() if hasattr(values, "to_numpy") else values), None
+        return check_dtype(np.asarray(values)), None
     plain = getattr(dtype, "numpy_dtype", None)
     if plain is None or plain.kind not in "biuf":
         if getattr(getattr(dtype, "subtype", None), "kind", "") in ("b", "i", "u", "f"):
@@ -72,33 +82,42 @@ def _read_pandas(values):
     return check_dtype(values.to_numpy(dtype=plain, na_value=plain.type(0))), mask
 
 
-def _read_nullable(values, null_count, is_null, options):
+def _read_nullable(values, dtype, null_count):
     """Columns with a validity bitmap: nulls are filled, and marked in a mask."""
-    count = null_count()
-    if not count:
-        array = values.to_numpy(**_accepted(values, options))
-        return check_dtype(np.asarray(array)), None
-    kind = str(getattr(values, "dtype", getattr(values, "type", ""))).lower()
+    kind = str(dtype).lower()
+    if kind not in _REAL_TYPES:
+        # Arrays and dictionaries of numbers are numbers too, where nothing is null.
+        try:
+            if not null_count and not kind.startswith("struct"):
+                return check_dtype(_plain_array(values)), None
+        except Exception:
+            pass
+        raise TypeError(
+            f"values must be real numbers of at most 64 bits, got a column of type {dtype}"
+        )
+    if kind == "null":
+        return np.zeros(len(values)), np.ones(len(values), dtype=bool)
+    if not null_count:
+        return check_dtype(_plain_array(values)), None
     filled = values.fill_null(False if kind.startswith("bool") else 0)
-    mask = getattr(values, is_null)()
-    return (
-        check_dtype(np.asarray(filled.to_numpy(**_accepted(filled, options)))),
-        np.asarray(mask.to_numpy(**_accepted(mask, options)), dtype=bool),
-    )
+    mask = np.asarray(_plain_array(values.is_null()), dtype=bool)
+    return check_dtype(_plain_array(filled)), mask
 
 
-def _accepted(values, options):
-    # Chunked Arrow columns take no such option: they always copy.
-    return {} if hasattr(values, "chunks") else options
+def _plain_array(values):
+    # Single Arrow arrays must be told that they may copy; chunked ones always do.
+    if origin(values) == "pyarrow" and not hasattr(values, "chunks"):
+        return np.asarray(values.to_numpy(zero_copy_only=False))
+    return np.asarray(values.to_numpy())
 
 
 def is_frame(values):
     """Whether a value is a table of named columns."""
-    if isinstance(values, np.ndarray):
-        return False
-    if hasattr(values, "column_names") and hasattr(values, "column"):
+    # Asked of the class: on some lazy tables the attribute itself is work, or a warning.
+    kind = type(values)
+    if hasattr(kind, "column_names") and hasattr(kind, "column"):
         return True
-    return hasattr(values, "columns") and hasattr(values, "dtypes") and hasattr(values, "shape")
+    return hasattr(kind, "columns") and (hasattr(kind, "iloc") or hasattr(kind, "get_columns"))
 
 
 def read_frame(values, names, size):

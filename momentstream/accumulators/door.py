@@ -5,7 +5,6 @@ readings), the second parts of integers that no double holds (or None), and weig
 A missing entry is a NaN in ``x``.
 """
 
-import struct
 from collections import deque
 from itertools import islice
 from numbers import Number
@@ -13,127 +12,10 @@ from numbers import Number
 import numpy as np
 
 from .columns import check_dtype, is_frame, origin, read_column, read_frame
+from .conversion import Room, pack_numbers, refuse_type, split_integers
 
 STRETCH = 1 << 16  # readings converted at a time
 CHUNK = 4096  # items of an iterator taken at a time
-_EXACT = 2**53
-
-
-def refuse_type(values):
-    """The TypeError for what is never taken."""
-    name = type(values).__name__
-    cure = {
-        "str": "parse it into numbers first",
-        "bytes": "np.frombuffer(data, dtype) reads numbers from bytes",
-        "bytearray": "np.frombuffer(data, dtype) reads numbers from bytes",
-        "dict": "feed .values() as a list",
-        "set": "a set loses repeated readings; feed a list",
-        "frozenset": "a set loses repeated readings; feed a list",
-        "complex": "feed the real and imaginary parts apart",
-        "Decimal": "convert it with float()",
-        "Fraction": "convert it with float()",
-        "longdouble": "convert it with float()",
-        "NoneType": "leave missing readings out, or feed nan",
-        "NAType": "leave missing readings out, or feed nan",
-    }.get(name, "feed a number, an array of real numbers, or an iterable of numbers")
-    return TypeError(f"values must be real numbers, got {name}; {cure}")
-
-
-class Room:
-    """Working space of one call, used for stretch after stretch: fresh pages cost more than
-    arithmetic."""
-
-    __slots__ = ("_arrays",)
-
-    def __init__(self):
-        self._arrays = {}
-
-    def get(self, name, size, dtype=np.float64):
-        array = self._arrays.get(name)
-        if array is None or len(array) < size or array.dtype != dtype:
-            array = self._arrays[name] = np.empty(size, dtype)
-        return array[:size]
-
-
-def split_integers(array, room):
-    """Doubles, and what they leave of 64-bit integers (None where they leave nothing)."""
-    x = room.get("x", len(array))
-    if array.dtype.itemsize < 8 or array.dtype.kind not in "iu":
-        np.copyto(x, array)
-        return x, None
-    low, half = room.get("low", len(array)), room.get("half", len(array), array.dtype)
-    np.right_shift(array, 32, out=half)
-    np.multiply(half, 4294967296.0, out=x)
-    np.bitwise_and(array, 0xFFFFFFFF, out=half)
-    np.copyto(low, half)
-    total = room.get("total", len(array))
-    np.add(x, low, out=total)
-    np.subtract(total, x, out=x)
-    np.subtract(low, x, out=low)
-    return total, low if low.any() else None
-
-
-def pack_floats(items):
-    """A list of Python floats as an array; three times as fast as NumPy's own."""
-    x = np.empty(len(items))
-    struct.pack_into(f"{len(items)}d", x, 0, *items)
-    return x
-
-
-def pack_numbers(items):
-    """A list of numbers as doubles and, for wide integers, their second parts.
-
-    Raises
-    ------
-    TypeError
-        An item is not a real number.
-    ValueError
-        An integer is outside -2**63 .. 2**64 - 1.
-    """
-    try:
-        deque(map(float.conjugate, items), maxlen=0)  # the fastest test that all are floats
-    except TypeError:
-        packed = _pack_integers(items) if set(map(type, items)) == {int} else None
-        return packed or _pack_mixed(items, np.empty(len(items)))
-    return pack_floats(items), None
-
-
-def _pack_integers(items):
-    """A list of Python integers as doubles and second parts, or None where one is too large."""
-    for dtype in (np.int64, np.uint64):
-        try:
-            array = np.array(items, dtype=dtype)
-        except OverflowError:
-            continue
-        return split_integers(array, Room())
-    return None
-
-
-def _pack_mixed(items, x):
-    low = None
-    for i, item in enumerate(items):
-        if isinstance(item, np.ndarray) and item.ndim == 0:
-            item = item[()]
-        if isinstance(item, (bool, np.bool_)):
-            x[i] = bool(item)
-        elif isinstance(item, (int, np.integer)) and not isinstance(item, np.timedelta64):
-            value = int(item)
-            if not -(2**63) <= value < 2**64:
-                raise ValueError(
-                    f"integers must lie in -2**63 .. 2**64 - 1, got {value} at item {i}"
-                )
-            x[i] = value
-            if not -_EXACT <= value <= _EXACT:
-                rest = value - int(x[i])
-                if rest:
-                    if low is None:
-                        low = np.zeros(len(items))
-                    low[i] = rest
-        elif isinstance(item, (float, np.float32, np.float16)):
-            x[i] = item
-        else:
-            raise refuse_type(item)
-    return x, low
 
 
 def _regular(values):
@@ -176,14 +58,15 @@ class _Lent:
 
 
 class Form:
-    """What an accumulator takes: the shape of a reading, its channels and their names."""
+    """What an accumulator takes: shape, channels and names of a reading, kind of weights."""
 
-    __slots__ = ("names", "shape", "size")
+    __slots__ = ("names", "shape", "size", "whole")
 
-    def __init__(self, shape, names):
+    def __init__(self, shape, names, weights=None):
         self.shape = shape
         self.size = int(np.prod(shape, dtype=np.int64)) if shape else None
         self.names = names
+        self.whole = weights == "frequency"
 
     def rows(self, shape):
         """How many readings an array of this shape holds; ValueError where it does not fit."""
@@ -195,8 +78,9 @@ class Form:
             return shape[0]
         if 0 in shape and len(shape) == 1:
             return 0
+        inner = ", ".join(str(length) for length in self.shape)
         raise ValueError(
-            f"readings must have shape {self.shape}, a chunk (n, {str(self.shape)[1:-1]}), "
+            f"readings must have shape {self.shape}, a chunk shape (n, {inner}), "
             f"got shape {tuple(shape)}"
         )
 
@@ -218,7 +102,7 @@ def stretches(values, weights, form):
         if form.shape:
             form.rows(np.shape(values))
         x, low = pack_numbers([values])
-        return True, iter([(x, low, _weights_of(weights, 1))])
+        return True, iter([(x, low, weights_of(weights, 1, form.whole))])
     if values is None or isinstance(values, (str, bytes, bytearray, dict, set, frozenset)):
         raise refuse_type(values)
     if isinstance(values, Number) or (isinstance(values, np.generic) and not values.shape):
@@ -250,16 +134,18 @@ def _is_array(values):
     )
 
 
-def _weights_of(weights, n):
+def weights_of(weights, n, whole):
     """Weights as an array of n doubles, or None."""
     if weights is None:
         return None
-    if isinstance(weights, (str, bytes)):
-        raise TypeError(f"weights must be real numbers, got {type(weights).__name__}")
+    if isinstance(weights, (str, bytes, bytearray, dict, set, frozenset)):
+        raise refuse_type(weights, "weights")
     if hasattr(weights, "__next__"):
         weights = list(islice(weights, n + 1))
     if isinstance(weights, (list, tuple, range, deque)):
-        w = pack_numbers(list(weights))[0]
+        w = _exact_enough(*pack_numbers(list(weights), "weights"), whole)
+    elif np.ndim(weights) == 0 and not _is_array(weights):
+        return np.full(n, _exact_enough(*pack_numbers([weights], "weights"), whole)[0])
     else:
         try:
             data, mask = read_column(weights)
@@ -267,6 +153,8 @@ def _weights_of(weights, n):
             raise TypeError(str(error).replace("values", "weights", 1)) from None
         if mask is not None and mask.any():
             raise ValueError(f"weights must not be missing, one is at {int(np.argmax(mask))}")
+        if whole and data.dtype.kind in "iu" and data.dtype.itemsize == 8:
+            _exact_enough(*split_integers(data.reshape(-1), Room()), whole)
         if data.ndim == 0:
             return np.full(n, float(data))
         w = writable(np.ascontiguousarray(data, dtype=np.float64).reshape(-1))
@@ -275,9 +163,20 @@ def _weights_of(weights, n):
     return w
 
 
+def _exact_enough(w, low, whole):
+    """Weights, unless they are frequencies that doubles do not count exactly."""
+    if whole and low is not None:
+        place = int(np.flatnonzero(low)[0])
+        raise ValueError(
+            "a frequency among the weights must be at most 2**53, "
+            f"got about {w[place]:.17g} at {place}"
+        )
+    return w
+
+
 def _array_stretches(data, mask, weights, form):
     n = form.rows(data.shape)
-    w = _weights_of(weights, n)
+    w = weights_of(weights, n, form.whole)
     if mask is not None and not mask.any():
         mask = None
     as_it_is = data.dtype == np.float64 or (
@@ -287,7 +186,8 @@ def _array_stretches(data, mask, weights, form):
     if as_it_is and mask is None and flags.c_contiguous and flags.aligned and data.dtype.isnative:
         return True, iter([(form.fold(writable(data).reshape(-1)), None, w)])
     if n <= CHUNK and data.size <= STRETCH:
-        x, low = _converted(np.ascontiguousarray(data).reshape(-1), mask, Room())
+        gone = None if mask is None else np.ascontiguousarray(mask).reshape(-1)
+        x, low = _converted(np.ascontiguousarray(data).reshape(-1), gone, Room())
         return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
     return False, _converted_stretches(data, mask, w, form, n)
 
@@ -355,20 +255,25 @@ def _converted(flat, mask, room):
 
 def _list_stretches(values, weights, form):
     values = values if isinstance(values, (list, tuple)) else list(values)
-    flat, shape = _regular(values)
+    try:
+        flat, shape = _regular(values)
+    except RecursionError:
+        raise ValueError("values must be lists of finite depth, got one within itself") from None
     n = form.rows(shape)
     x, low = pack_numbers(flat)
-    w = _weights_of(weights, n)
+    w = weights_of(weights, n, form.whole)
     return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
 
 
 def _iterator_stretches(values, weights, form):
-    if weights is not None and np.ndim(weights) == 0 and not hasattr(weights, "__iter__"):
-        beside = None
-    else:
-        beside = None if weights is None else iter(weights)
+    beside = iter(weights) if hasattr(weights, "__iter__") and np.ndim(weights) else None
+    if hasattr(weights, "__next__"):
+        beside = weights
+    rows = max(1, min(CHUNK, STRETCH // (form.size or 1)))
+    done = 0
+    part = weights
     while True:
-        items = list(islice(values, CHUNK))
+        items = list(islice(values, rows))
         if beside is not None:
             part = list(islice(beside, len(items) if items else 1))
             if len(part) != len(items):
@@ -376,17 +281,18 @@ def _iterator_stretches(values, weights, form):
                 raise ValueError(f"readings and weights must be as many: the {fewer} ran out")
         if not items:
             return
+        flat = items
         if form.shape:
             flat, shape = _regular(items)
             if shape[1:] != form.shape:
-                form.rows(shape)
-            x, low = pack_numbers(flat)
-        else:
-            x, low = pack_numbers(items)
-        w = _weights_of(weights if beside is None else part, len(items))
+                raise ValueError(
+                    f"an iterator must yield readings of shape {form.shape}, got shape {shape[1:]}"
+                    f" (for so many at once: {shape})"
+                )
+        x, low = pack_numbers(flat, start=done * (form.size or 1))
+        w = weights_of(part, len(items), form.whole)
         yield form.fold(x), None if low is None else form.fold(low), w
-        if len(items) < CHUNK and beside is None:
-            return
+        done += len(items)
 
 
 def _frame_stretches(values, weights, form):
@@ -394,7 +300,7 @@ def _frame_stretches(values, weights, form):
     if form.shape and len(form.shape) != 1:
         raise ValueError(f"a frame holds readings of one axis, the accumulator has {form.shape}")
     n = len(columns[0][0]) if columns else 0
-    w = _weights_of(weights, n if form.shape else n * len(columns))
+    w = weights_of(weights, n if form.shape else n * len(columns), form.whole)
 
     def read():
         rows = max(1, STRETCH // max(1, len(columns)))

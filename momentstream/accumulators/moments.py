@@ -13,11 +13,12 @@ from ..errors import MergeError, NonFiniteError
 from ..statistics.readout import Statistics, View, checked_degree
 from ..statistics.summary import Summary, affine_view, scaled_vector
 from .base import Accumulator
-from .door import Form, pack_floats, stretches
+from .conversion import pack_floats
+from .door import STRETCH, Form, stretches
 from .moments_payload import MOST_COUNTED, WEIGHTS, read_payload, write_payload
 from .rows import removed_rows, rows_of, vector_of
-from .settings import checked_order, checked_shape, choice, finite_array
-from .stream import POLICIES, Stream, even
+from .settings import checked_order, checked_shape, choice, extreme_array, finite_array
+from .stream import POLICIES, Refusal, Stream, even
 from .transforms import TRANSFORMS, transformed
 
 if TYPE_CHECKING:
@@ -94,6 +95,7 @@ class Moments(Accumulator, Statistics):
         "_order",
         "_pending",
         "_quick",
+        "_reading",
         "_settled",
         "_shape",
         "_stream",
@@ -116,7 +118,8 @@ class Moments(Accumulator, Statistics):
         self._weights = choice("weights", weights, WEIGHTS)
         self._nonfinite = choice("nonfinite", nonfinite, POLICIES)
         self._transform = choice("transform", transform, TRANSFORMS)
-        self._form = Form(self._shape, self._names)
+        self._form = Form(self._shape, self._names, self._weights)
+        self._reading = False  # whether an iterator is being read
         self._pending: list[float] = []
         # Single floats may wait in a list, where nothing has to be known of them at once.
         self._quick = self._shape == () and weights is None and transform is None
@@ -177,6 +180,7 @@ class Moments(Accumulator, Statistics):
         return self._update(values, weights, threads)
 
     def _update(self, values, weights, threads):
+        self._idle()
         if type(threads) is not int or threads < 1:
             raise ValueError(f"threads must be an integer of at least 1, got {threads!r}")
         if (weights is None) != (self._weights is None):
@@ -190,33 +194,63 @@ class Moments(Accumulator, Statistics):
             )
         self._flush()
         single, parts = stretches(values, weights, self._form)
-        stream = self._stream if single else self._stream.copy()
-        done = 0
-        for x, low, w in parts:
-            if self._transform is not None:
-                x, low = transformed(x, low, self._transform, self._nonfinite)
+        if single and self._transform is None:
+            self._feed(self._stream, parts, threads)
+        else:
+            stream = self._stream.copy()
+            quick, self._quick, self._reading = self._quick, False, True
             try:
-                stream.feed(x, low, w, threads)
-            except NonFiniteError as error:
-                raise self._placed(error, done, values) from None
-            done += len(x)
-        self._stream = stream
+                self._feed(stream, parts, threads)
+            finally:
+                self._quick, self._reading = quick, False
+            self._stream = stream
         self._settled = None
         return self
 
-    def _placed(self, error, done, values):
-        """The error with the position in the whole call, and a word on a transform's domain."""
-        where = error.position
-        if isinstance(where, tuple):
-            row, column = where
-            places = (int(i) for i in np.unravel_index(column, self._shape))
-            position = (row + done, *places)
-        else:
-            position = where + done
-        message = error.args[0].replace(f"reading at {where}", f"reading at {position}", 1)
-        if self._transform is not None:
-            message = message.replace("reading", f"{self._transform} of the reading", 1)
-        return NonFiniteError(message, position)
+    def _feed(self, stream, parts, threads):
+        done = 0
+        for part in parts if self._transform is None else self._transformed(parts):
+            try:
+                stream.feed(*part, threads)
+            except Refusal as refusal:
+                raise self._error_of(refusal, done) from None
+            done += len(part[0])
+
+    def _idle(self):
+        """Refuse a change while an iterator, which may itself feed this accumulator, is read."""
+        if self._reading:
+            raise RuntimeError(
+                "the accumulator is being fed by an iterator that changes it; nothing was taken in"
+            )
+
+    def _transformed(self, parts):
+        """The stretches after the transform, cut so that memory stays bounded."""
+        for x, low, w in parts:
+            rows = max(1, STRETCH // (self._form.size or 1))
+            for start in range(0, len(x), rows):
+                cut = slice(start, start + rows)
+                pair = x[cut], None if low is None else low[cut]
+                pair = transformed(*pair, self._transform, self._nonfinite)
+                yield (*pair, None if w is None else w[cut])
+
+    def _error_of(self, refusal, done):
+        """What the user is told of a refused reading or weight; ``done`` readings came before."""
+        row = refusal.row + done
+        if refusal.fault is not None:
+            return ValueError(
+                f"{refusal.fault}, got {refusal.value!r} at {row}; nothing was taken in"
+            )
+        position: int | tuple[int, ...] = row
+        if refusal.column is not None:
+            places = np.unravel_index(refusal.column, self._shape)
+            position = (row, *(int(place) for place in places))
+        what = "reading" if self._transform is None else f"{self._transform} of the reading"
+        return NonFiniteError(
+            f"{what} at {position} is {refusal.value!r}; nothing was taken in. "
+            'nonfinite="omit" leaves such readings out and counts them, "propagate" lets them '
+            "through",
+            position,
+        )
 
     def _flush(self):
         if self._pending:
@@ -227,9 +261,10 @@ class Moments(Accumulator, Statistics):
 
     def clear(self) -> Self:
         """Forget everything that was fed; returns the accumulator itself."""
+        self._idle()
         self._pending = []
-        self._settled = None
         self._stream = self._new_stream()
+        self._settled = None
         return self
 
     # -- combining ---------------------------------------------------------------------------
@@ -269,7 +304,7 @@ class Moments(Accumulator, Statistics):
         self._stream.take_in(part)
         if self._names is None and other._names is not None:
             self._names = other._names
-            self._form = Form(self._shape, self._names)
+            self._form = Form(self._shape, self._names, self._weights)
         self._settled = None
         return self
 
@@ -316,9 +351,11 @@ class Moments(Accumulator, Statistics):
         total, part = self._settle(), other._settle()
         left = total.tally - part.tally
         if np.any(left[..., :2] < 0):
+            which = 0 if np.any(left[..., 0] < 0) else 1
             raise MergeError(
-                f"more would be removed than there is: {_counts(part.tally)} readings from "
-                f"{_counts(total.tally)}; nothing was changed"
+                f"more would be removed than there is: {_counts(part.tally, which)} "
+                f"{('readings', 'omitted readings')[which]} from {_counts(total.tally, which)}; "
+                "nothing was changed"
             )
         with np.errstate(all="ignore"):
             rows = removed_rows(total.row, part.row, left, self._stream)
@@ -481,6 +518,8 @@ class Moments(Accumulator, Statistics):
         if count >= MOST_COUNTED:
             raise ValueError(f"count must be below 2**63 - 1, got {count}")
         level = finite_array("mean", mean)
+        if not hasattr(central, "__iter__"):
+            raise TypeError(f"central must be a sequence of moments, got {central!r}")
         moments = [finite_array(f"central[{i}]", m, level.shape) for i, m in enumerate(central)]
         for i, values in enumerate(moments):
             if i % 2 == 0 and np.any(values < 0.0):
@@ -495,7 +534,12 @@ class Moments(Accumulator, Statistics):
         self = cls(order, shape=level.shape)
         stream = self._stream
         lead = stream.tally.shape[:-1]
-        ends = [np.broadcast_to(np.asarray(end, float), level.shape) for end in (minimum, maximum)]
+        ends = [
+            extreme_array(name, end, level.shape)
+            for name, end in (("minimum", minimum), ("maximum", maximum))
+        ]
+        if np.any((ends[0] > level) | (ends[1] < level)):
+            raise ValueError(f"minimum and maximum must enclose the mean, got {ends}")
         moments = [values.reshape(lead) for values in moments]
         if even(order) != order:
             moments.append(_guard(moments, level.reshape(lead)))
@@ -657,12 +701,13 @@ class Moments(Accumulator, Statistics):
     def _replace(self, rows, tally):
         """Become a settled state of these vectors and counts."""
         self._pending = []
-        self._settled = None
         self._stream = self._new_stream()
+        self._settled = None
         self._stream.table[..., 0, :] = rows
         self._stream.tally[...] = tally
 
     def _gate(self, other, verb):
+        self._idle()
         self._same_type(other)
         for name in ("order", "shape", "weights", "transform"):
             mine, theirs = getattr(self, name), getattr(other, name)
@@ -701,8 +746,8 @@ def _guard(moments, like):
     return second ** ((len(moments) + 2) / 2)
 
 
-def _counts(tally):
-    return int(tally[0]) if tally.ndim == 1 else tally[:, 0].tolist()
+def _counts(tally, which):
+    return int(tally[which]) if tally.ndim == 1 else tally[:, which].tolist()
 
 
 def _span(values):

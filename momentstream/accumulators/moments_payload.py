@@ -119,7 +119,12 @@ def read_payload(cls, reader, working):
     stream.table[..., 0, :] = rows
     if working:
         _read_working_state(reader, stream)
-    elif np.any((tally[..., 0] > 0) != (rows[..., 3] > 0.0)):
+    settled = moments._settle()
+    counts = settled.tally[..., :2]
+    if np.any(counts < 0) or np.any(counts == MOST_COUNTED):
+        raise StateError("state holds counts beyond 63 bits")
+    _checked_rows(_without_first(settled.row), stream.order, stream.weighted)
+    if np.any((counts[..., 0] > 0) != (settled.row[..., 3] > 0.0)):
         raise StateError("state holds readings without weight, or weight without readings")
     return moments
 
@@ -129,13 +134,16 @@ def _read_working_state(reader, stream):
     if blocks >= 1 << 50 or fill >= stream.rows or low > 1:
         raise StateError("state holds an impossible block count")
     lead = () if stream.channels is None else (stream.channels,)
+    levels = [level for level in range(blocks.bit_length()) if blocks >> level & 1]
+    read = []
+    for _ in levels:
+        rows = reader.doubles((*lead, stream.fields - 1))
+        read.append(_checked_rows(rows, stream.order, stream.weighted))
+    # Only now, when they are known to be there, is room made for them.
     table = np.zeros((*lead, _FIRST_LEVEL + max(1, blocks.bit_length()), stream.fields))
     table[..., 0, :] = stream.table[..., 0, :]
-    for level in range(blocks.bit_length()):
-        if blocks >> level & 1:
-            rows = reader.doubles((*lead, stream.fields - 1))
-            rows = _checked_rows(rows, stream.order, stream.weighted)
-            table[..., _FIRST_LEVEL + level, :] = rows
+    for level, rows in zip(levels, read, strict=True):
+        table[..., _FIRST_LEVEL + level, :] = rows
     stream.table, stream.blocks = table, blocks
     if fill:
         readings = reader.doubles((fill, *lead))

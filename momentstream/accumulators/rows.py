@@ -5,7 +5,7 @@ A row holds mean, rest, scale, W, 0, M2 .. Mp and, with weights, their scale, V2
 
 import numpy as np
 
-from ..algebra.central import MomentVector, remove
+from ..algebra.central import MomentVector, in_units, remove
 from ..errors import MergeError
 from .lazy import vector as _vector
 
@@ -26,6 +26,8 @@ def vector_of(rows, order, weights, shape=None):
 def rows_of(vector, stream):
     """A ``MomentVector`` as rows of a stream, in the units its content asks for."""
     lead = () if stream.channels is None else (stream.channels,)
+    if not stream.weighted:
+        vector = in_units(vector, vector.scale, 0.0)
     rows = np.zeros((*lead, stream.fields))
 
     def flat(values):

@@ -10,7 +10,6 @@ import itertools
 
 import numpy as np
 
-from ..errors import NonFiniteError
 from .lazy import blocks as _blocks
 from .lazy import channels as _channels
 from .lazy import vector as _vector
@@ -18,7 +17,7 @@ from .lazy import vector as _vector
 POLICIES = ("raise", "omit", "propagate")
 _BLOCK = 8192  # kernels.blocks.BLOCK, known without a compiler
 _LARGEST_BLOCK = 1 << 21  # readings in a block of many channels
-_SMALLEST_BUFFER = 512
+_SMALLEST_BUFFER = 512  # readings
 _FIELDS_WEIGHTED = 4
 _single_agrees: dict[int, bool] = {}
 
@@ -36,6 +35,20 @@ def block_rows(channels):
     while rows > 64 and rows * channels > _LARGEST_BLOCK:
         rows //= 2
     return rows
+
+
+class Refusal(ValueError):
+    """A reading or weight was refused, and nothing taken in; places count from the stretch's start.
+
+    ``fault`` says what is wrong with a weight; None: ``value`` is a reading.
+    """
+
+    def __init__(self, row=0, column=None, value=0.0, fault=None):
+        super().__init__(f"{fault or 'reading'}: {value!r} at row {row}, column {column}")
+        self.row = row
+        self.column = column
+        self.value = value
+        self.fault = fault
 
 
 class Settled:
@@ -120,12 +133,21 @@ class Stream:
 
         Raises
         ------
-        NonFiniteError, ValueError
-            A reading or weight is refused; ``position`` counts from the start of the stretch.
+        Refusal
+            A reading or weight is refused; its places count from the start of the stretch.
         """
+        try:
+            self._feed(x, low, w, threads)
+        except Refusal:
+            # Parts are looked at in their own order; a reader looks for the first of all.
+            raise self._first_refusal(x, w) from None
+
+    def _feed(self, x, low, w, threads):
         n = len(x)
         if n == 0:
             return
+        if self.whole:
+            self._check_total(w)
         head = min(n, self.rows - self.fill) if self.fill or n < self.rows else 0
         tail = head + (n - head) // self.rows * self.rows
         for start, stop in ((0, head), (tail, n)):
@@ -149,9 +171,7 @@ class Stream:
             fill = self.fill
             self._append(x, low, w, 0, head)
             self.fill = fill
-            blocks = self._take(
-                self.buffer, self.low, self.w, table, blocks, tally, extremes, -fill
-            )
+            blocks = self._take(self.buffer, self.low, self.w, table, blocks, tally, extremes)
         if tail > head:
             part = (
                 x[head:tail],
@@ -159,15 +179,14 @@ class Stream:
                 None if w is None else w[head:tail],
             )
             if threads > 1:
-                blocks = self._take_in_groups(*part, table, blocks, tally, extremes, head, threads)
+                blocks = self._take_in_groups(*part, table, blocks, tally, extremes, threads)
             else:
-                blocks = self._take(*part, table, blocks, tally, extremes, head)
-        self._check_count(tally)
+                blocks = self._take(*part, table, blocks, tally, extremes)
         self.table, self.blocks, self.tally, self.extremes = table, blocks, tally, extremes
         self.fill = 0
         self.low = None
 
-    def _take(self, x, low, w, table, blocks, tally, extremes, offset):
+    def _take(self, x, low, w, table, blocks, tally, extremes):
         policy, whole = self._policy, self.whole
         if self.channels is not None:
             after = _channels.take_row_blocks(
@@ -180,7 +199,7 @@ class Stream:
                 x, low, w, policy, whole, self.order, table, blocks, tally, extremes
             )
         if after < 0:
-            self._refuse(tally, x, w, offset)
+            raise Refusal
         return after
 
     def _take_single(self, x, policy, table, blocks, tally, extremes):
@@ -193,11 +212,10 @@ class Stream:
                 part, None, None, policy, False, self.order, table, blocks, tally, extremes
             )
             if blocks < 0:
-                tally[_blocks.POSITION] += start
                 break
         return blocks
 
-    def _take_in_groups(self, x, low, w, table, blocks, tally, extremes, offset, threads):
+    def _take_in_groups(self, x, low, w, table, blocks, tally, extremes, threads):
         """Aligned groups of blocks on threads, each its own small tree, inserted in order."""
         from concurrent.futures import ThreadPoolExecutor
 
@@ -220,12 +238,12 @@ class Stream:
             own_tally = np.zeros_like(tally)
             own_extremes = np.empty_like(extremes)
             own_extremes[...] = (np.inf, -np.inf)
-            self._take(*part(start, stop), own, 0, own_tally, own_extremes, offset + start)
+            self._take(*part(start, stop), own, 0, own_tally, own_extremes)
             top = int(_vector.LEVELS) + _blocks.GROUP_LEVEL
             return own[..., top, :], own_tally, own_extremes
 
         if lead:
-            blocks = self._take(*part(0, edges[0]), table, blocks, tally, extremes, offset)
+            blocks = self._take(*part(0, edges[0]), table, blocks, tally, extremes)
         with ThreadPoolExecutor(max_workers=min(threads, max(groups, 1))) as pool:
             jobs = [pool.submit(reduce, *edge) for edge in itertools.pairwise(edges)]
             try:
@@ -242,9 +260,7 @@ class Stream:
             extend(extremes, own_extremes)
         if edges[-1] < len(x):
             start = edges[-1]
-            blocks = self._take(
-                *part(start, len(x)), table, blocks, tally, extremes, offset + start
-            )
+            blocks = self._take(*part(start, len(x)), table, blocks, tally, extremes)
         return blocks
 
     def _append(self, x, low, w, start, stop):
@@ -268,7 +284,8 @@ class Stream:
         have = 0 if self.buffer is None else len(self.buffer)
         if size <= have:
             return
-        rows = min(self.rows, max(_SMALLEST_BUFFER, 1 << (size - 1).bit_length()))
+        least = max(1, _SMALLEST_BUFFER // (self.channels or 1))
+        rows = min(self.rows, max(least, 1 << (size - 1).bit_length()))
 
         def grown(old, shape):
             new = np.zeros(shape)
@@ -296,50 +313,52 @@ class Stream:
 
     def _check(self, x, w, start, stop):
         """Refuse what may not wait in the buffer."""
-        if self.policy != "raise" and w is None:
-            return
-        part = x[start:stop]
-        tally = np.zeros(4, np.int64)
-        part_w = None if w is None else w[start:stop]
         finite = self.policy == "raise"
-        if self.channels is None:
-            if part.dtype == np.float32:
-                part = part.astype(np.float64)
-            good = _blocks.first_refused(part, part_w, finite, self.whole, tally)
-        else:
-            repeated = None if part_w is None else np.repeat(part_w, self.channels)
-            flat = np.ascontiguousarray(part).reshape(-1)
-            good = _blocks.first_refused(flat, repeated, finite, self.whole, tally)
-            if not good:
-                row, column = divmod(int(tally[_blocks.POSITION]), self.channels)
-                refuse(int(tally[_blocks.REFUSED]), start + row, column, part[row, column],
-                       None if part_w is None else part_w[row])  # fmt: skip
+        if not finite and w is None:
             return
-        if not good:
-            place = int(tally[_blocks.POSITION])
-            refuse(int(tally[_blocks.REFUSED]), start + place, None, part[place],
-                   None if part_w is None else part_w[place])  # fmt: skip
+        part, tally = x[start:stop], np.zeros(4, np.int64)
+        part_w = None if w is None else w[start:stop]
+        if self.channels is not None:
+            part_w = None if w is None else np.repeat(part_w, self.channels)
+        flat = np.ascontiguousarray(part, dtype=np.float64).reshape(-1)
+        if not _blocks.first_refused(flat, part_w, finite, self.whole, tally):
+            raise Refusal
 
-    def _refuse(self, tally, x, w, offset):
-        """Raise for what a kernel noted in the tally."""
-        if self.channels is None:
-            kind, place = int(tally[_blocks.REFUSED]), int(tally[_blocks.POSITION])
-            refuse(kind, offset + place, None, x[place], None if w is None else w[place])
-        column = int(np.argmax(tally[:, _blocks.REFUSED] > 0))
-        kind, place = int(tally[column, _blocks.REFUSED]), int(tally[column, _blocks.POSITION])
-        bad = x[place]
-        if kind == _blocks.READING:
-            # The kernel reports by channel; the first row refused is what a reader looks for.
-            finite = np.isfinite(x)
+    def _first_refusal(self, x, w):
+        """The refusal that comes first in a stretch, with all that an error tells."""
+        bad = np.zeros(len(x), dtype=bool)
+        if w is not None:
+            bad = ~((w >= 0.0) & (w < np.inf))
+            if self.whole:
+                bad |= (w != np.floor(w)) | (w > 2.0**53)
+        columns = x.reshape(len(x), -1)
+        missing = np.zeros(columns.shape, dtype=bool)
+        if self.policy == "raise":
+            missing = ~np.isfinite(columns)
             if w is not None:
-                finite |= (w == 0.0)[:, None]
-            place, column = divmod(int(np.argmin(finite)), self.channels)
-            bad = x[place]
-        refuse(kind, offset + place, column, bad[column], None if w is None else w[place])
+                missing &= (w > 0.0)[:, None]
+        row = int(np.argmax(bad | missing.any(axis=1)))
+        if bad[row]:
+            return Refusal(row, None, float(w[row]), self._fault_of(w[row]))
+        column = int(np.argmax(missing[row]))
+        place = None if self.channels is None else column
+        return Refusal(row, place, float(columns[row, column]), None)
 
-    def _check_count(self, tally):
-        if np.any(tally[..., :2] == _blocks.MOST_COUNTED):
-            raise ValueError("the count would pass 2**63 - 1 readings")
+    def _fault_of(self, weight):
+        if not 0.0 <= weight < np.inf:
+            return "weights must be finite and not negative"
+        if weight != np.floor(weight):
+            return 'frequencies must be whole numbers (for others: weights="reliability")'
+        return "a frequency among the weights must be at most 2**53"
+
+    def _check_total(self, w):
+        """Refuse frequencies whose sum no 64-bit integer holds."""
+        if float(w.sum()) < 2.0**53:
+            return
+        good = w[(w >= 0.0) & (w <= 2.0**53)]
+        total = sum(map(int, good.tolist())) + int(self.settle().tally[..., :2].max())
+        if total >= 2**63 - 1:
+            raise ValueError("the count would pass 2**63 - 1; nothing was taken in")
 
     # -- settling ----------------------------------------------------------------------------
 
@@ -394,26 +413,8 @@ def single_precision_agrees(order):
     """Whether kernels read single precision directly with the bits of doubles, on this machine."""
     order = even(order)
     if order not in _single_agrees:
-        probe = np.sin(np.arange(8192.0)).astype(np.float32)
+        probe = np.cos(np.arange(8192.0)).astype(np.float32)
         _single_agrees[order] = bool(
             _blocks.single_sums_agree(probe.astype(np.float64), probe, order)
         )
     return _single_agrees[order]
-
-
-def refuse(kind, place, column, value, weight):
-    """Raise for a refused reading or weight at a place in the call."""
-    where = place if column is None else (place, column)
-    if kind == _blocks.READING:
-        raise NonFiniteError(
-            f"reading at {where} is {float(value)!r}; nothing was taken in. "
-            'nonfinite="omit" leaves such readings out and counts them, "propagate" lets them '
-            "through",
-            where,
-        )
-    what = {
-        _blocks.WEIGHT: "weights must be finite and not negative",
-        _blocks.FRACTION: 'frequencies must be whole numbers (for others: weights="reliability")',
-        _blocks.TOO_MANY: "a frequency must be at most 2**53",
-    }[kind]
-    raise ValueError(f"{what}, got {float(weight)!r} at {place}; nothing was taken in")

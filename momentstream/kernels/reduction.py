@@ -185,7 +185,8 @@ def find_pivot(x, low, scale, order, by_rows):
     keep_apart()
     head = x[: HEAD_ROWS if by_rows is not None else _HEAD_UPPER if order > 8 else _HEAD]
     if low is None and scale == 0:
-        return x[0] + head_distance(head, x[0], by_rows), 0.0
+        origin = np.float64(x[0])
+        return origin + head_distance(head, origin, by_rows), 0.0
     distances = np.empty(head.size)
     first, second = factors_of(scale)
     origin = x[0] * first * second

@@ -107,10 +107,9 @@ class Statistics:
     def _need(self, order, name):
         view = self._view()
         if view.order < order:
-            raise OrderError(
-                f"{name} needs order={order}, {type(self).__name__} keeps order={view.order}; "
-                f"make it with order={order} or higher"
-            )
+            cure = f"make it with order={order} or higher" if order <= 16 else "the highest is 16"
+            kept = f"{type(self).__name__} keeps order={view.order}"
+            raise OrderError(f"{name} needs order={order}, {kept}; {cure}")
         return view
 
     # -- level and spread --------------------------------------------------------------------
@@ -396,11 +395,10 @@ class Statistics:
         120.0
         """
         k = checked_degree(k, least=1)
-        view = self._need(k, f"k_statistic({k})")
-        highest = 4 if view.weights == "reliability" else 6
+        highest = 4 if self._view().weights == "reliability" else 6
         if k > highest:
-            kind = f"{view.weights} weights" if view.weights else "readings"
-            raise ValueError(f"k must be at most {highest} for {kind}, got {k}")
+            raise ValueError(f"k must be at most {highest} for these readings, got {k}")
+        view = self._need(k, f"k_statistic({k})")
         if k == 1:
             return self.mean()
         with np.errstate(all="ignore"):
