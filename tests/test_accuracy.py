@@ -81,6 +81,17 @@ def test_means_beside_rare_far_readings(order, weights, shape):
         assert_mean(np.ravel(accumulator.mean())[0], Exact(x, w, order=1), f"seed {seed}")
 
 
+@pytest.mark.parametrize("order", [1, 4, 8])
+@pytest.mark.parametrize("noise", [0.0, 1e-3, 1.0])
+def test_means_beside_one_far_reading(order, noise):
+    # Where the far reading has been added, its size is what every further sum is rounded to.
+    for seed in range(40):
+        rng = np.random.default_rng(seed)
+        x = rng.normal() + noise * rng.normal(size=int(rng.integers(100, BLOCK)))
+        x[rng.integers(len(x))] = 10.0 ** rng.uniform(1, 19)
+        assert_mean(ms.Moments(order).update(x).mean(), Exact(x, order=1), f"seed {seed}")
+
+
 @pytest.mark.parametrize("order", [1, 2, 3, 5, 6, 7, 12, 15])
 def test_every_order(order):
     x = arrivals(np.random.default_rng(order), 9000)["lopsided"] + 1e8

@@ -564,7 +564,7 @@ def test_every_number_replaced_by_an_awkward_one(name):
     for place in range(24, len(data) - 11):
         if (place - 30) % 8 and (place - 30 - 5) % 8:
             continue  # where numbers stand: after six bytes, in a working state after 13 more
-        for number in AWKWARD:
+        for number in AWKWARD[place % 3 :: 3]:
             accepted += assert_refused_or_equal(repaired(data[:place] + number + data[place + 8 :]))
     assert accepted  # a reading or an extreme may be another one
 

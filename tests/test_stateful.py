@@ -8,6 +8,7 @@ import tempfile
 from fractions import Fraction
 
 import numpy as np
+import pytest
 from assertions import assert_close
 from exact import Exact, U, assert_same_state
 from hypothesis import settings
@@ -126,12 +127,9 @@ class Life(RuleBasedStateMachine):
             return
         before = self.lives.to_bytes(resume=True)
         for form in (values, iter(values), np.array(values)):
-            try:
+            with pytest.raises(ms.NonFiniteError) as caught:
                 self.lives.update(form, w)
-            except ms.NonFiniteError as error:
-                assert error.position == len(values) - 1
-            else:
-                raise AssertionError("a NaN was taken in")
+            assert caught.value.position == len(values) - 1
             assert self.lives.to_bytes(resume=True) == before
 
     # -- combining -------------------------------------------------------------------------

@@ -81,6 +81,15 @@ def _k_statistic_in_units(view, k):
     return np.where(n >= k, value, np.nan)
 
 
+_NOTHING = 10_000.0
+
+
+def _size(values):
+    """The exponents of values; far below all others for zero."""
+    values = np.abs(np.asarray(values, float))
+    return np.where(values > 0.0, np.frexp(values)[1], -_NOTHING)
+
+
 def _half_power(variance, k):
     """``variance ** (k / 2)``, by a square root that keeps powers of two exact."""
     power = variance ** (k // 2)
@@ -301,17 +310,12 @@ class Statistics:
     def _about(view, k, about):
         """The k-th moment about a point, and the scale s it is in units of ``2**(k * s)`` of."""
         v = view.vector
-        # Units in which neither the point nor the readings overflow.
-        sizes = [
-            v.scale + np.frexp(np.abs(v.mean))[1],
-            np.frexp(np.abs(np.asarray(about, float)))[1],
-        ]
+        # Units in which neither the point nor the readings overflow, and none of them vanishes.
+        sizes = [_size(v.mean) + v.scale, _size(about)]
         if len(v.sums):
-            spread = np.sqrt(v.sums[0] / v.weight)
-            sizes.append(v.scale + np.where(spread > 0.0, np.frexp(spread)[1], -5000))
-        scale = np.maximum(sizes[0], sizes[1])
-        for size in sizes[2:]:
-            scale = np.maximum(scale, size)
+            sizes.append(_size(np.sqrt(v.sums[0] / v.weight)) + v.scale)
+        scale = np.maximum.reduce(np.broadcast_arrays(*sizes))
+        scale = np.where(scale < -_NOTHING / 2, 0.0, scale)
         units = view._replace(vector=in_units(v, scale, v.weight_scale))
         moments = central_moments(units, k)
         distance = (units.vector.mean - shift(about, -scale)) + units.vector.rest

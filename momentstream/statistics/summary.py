@@ -27,10 +27,13 @@ def scaled_vector(mean, central, weight):
     """The moment vector of a mean and central moments (order 2 on), in units that are safe."""
     central = np.asarray(central, dtype=float)
     degrees = np.arange(2, len(central) + 2).reshape((-1,) + (1,) * np.ndim(mean))
-    size = np.frexp(np.abs(mean))[1] * 1.0
+    level = np.frexp(np.abs(mean))[1] * 1.0
+    size = np.full(np.shape(mean), -5000.0)
     for degree, values in zip(degrees.ravel(), central, strict=True):
         exponent = np.where(values != 0.0, np.ceil(np.frexp(np.abs(values))[1] / degree), -5000.0)
         size = np.maximum(size, exponent)
+    # Units of the spread, as long as the mean has room in them; of the mean where there is none.
+    size = np.where(size < -2000.0, level, np.maximum(size, level - 1020.0))
     sums = shift(central, -degrees * size) * weight
     mean = shift(np.asarray(mean, float), -size)
     return MomentVector(np.float64(weight), mean, 0.0 * mean, size, sums)
