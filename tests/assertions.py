@@ -81,7 +81,8 @@ def _rational(value):
     if isinstance(value, Fraction):
         return value
     if hasattr(value, "man") and hasattr(value, "exp"):
-        return Fraction(int(value.man)) * Fraction(2) ** int(value.exp)
+        man = -int(value.man) if value < 0 else int(value.man)  # mpmath keeps the sign apart
+        return Fraction(man) * Fraction(2) ** int(value.exp)
     if isinstance(value, float | np.floating) and math.isnan(value):
         return None
     return Fraction(int(value)) if isinstance(value, int | np.integer) else Fraction(float(value))

@@ -323,6 +323,7 @@ def test_omitted_readings_are_as_if_never_there(order, share):
     kept = np.isfinite(x)
     accumulator = ms.Moments(order, nonfinite="omit").update(x)
     assert accumulator.omitted == n - kept.sum()
+    assert (accumulator.minimum(), accumulator.maximum()) == (x[kept].min(), x[kept].max())
     # A block holds readings by their place, gaps included.
     places = np.flatnonzero(kept)
     rank = np.cumsum(kept) - 1

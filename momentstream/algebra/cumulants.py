@@ -52,7 +52,7 @@ def k_statistic(k, n, m):
     if k == 3:
         return n * n * m[3] / below
     if k == 4:
-        return n * n * ((n + 1) * m[4] - 3 * (n - 1) * m[2] ** 2) / below
+        return n * n * ((n + 1) * m[4] - 3 * (n - 1) * m[2] * m[2]) / below
     if k == 5:
         return n * n * n * ((n + 5) * m[5] - 10 * (n - 1) * m[2] * m[3]) / below
     return (
@@ -61,8 +61,8 @@ def k_statistic(k, n, m):
         * (
             (n + 1) * (n * n + 15 * n - 4) * m[6]
             - 15 * (n - 1) ** 2 * (n + 4) * m[2] * m[4]
-            - 10 * (n - 1) * (n * n - n + 4) * m[3] ** 2
-            + 30 * n * (n - 1) * (n - 2) * m[2] ** 3
+            - 10 * (n - 1) * (n * n - n + 4) * m[3] * m[3]
+            + 30 * n * (n - 1) * (n - 2) * m[2] * m[2] * m[2]
         )
         / below
     )
@@ -80,5 +80,6 @@ def weighted_k_statistic(k, v, m):
     square = v[2] * v[2]
     below = (1 - v[2]) * (1 - 6 * v[2] + 8 * v[3] + 3 * square - 6 * v[4])
     return (
-        (1 - 4 * v[3] + 3 * square) * m[4] - 3 * (1 - 2 * v[2] + 4 * v[3] - 3 * square) * m[2] ** 2
+        (1 - 4 * v[3] + 3 * square) * m[4]
+        - 3 * (1 - 2 * v[2] + 4 * v[3] - 3 * square) * (m[2] * m[2])
     ) / below

@@ -12,6 +12,12 @@ def number(value, digits=6):
     return f"{float(value):.{digits}g}"
 
 
+def label_text(label, longest=40):
+    """A name on one line: control characters written out, the rest shortened."""
+    shown = "".join(c if c.isprintable() else ascii(c)[1:-1] for c in label)
+    return shown if len(shown) <= longest else f"{shown[: longest - 3]}..."
+
+
 def columns(header, rows):
     """Lines of a table: the first column to the left, the others to the right."""
     cells = [header, *rows] if header else rows

@@ -32,6 +32,7 @@ from .vector import (
     insert_block,
     is_finite,
     to_plain_scale,
+    two_sum,
 )
 
 BLOCK = 8192
@@ -184,7 +185,7 @@ def sweep_gapped(x, order, room, row, whole_row):
     keep_apart()
     kept = np.empty(STRETCH + 8)
     held = n = i = ZERO
-    pivot = 0.0
+    pivot = rest = 0.0
     for k in range(order + 1):
         room[whole_row, k] = 0.0
     room[whole_row, LEAST], room[whole_row, MOST] = np.inf, -np.inf
@@ -207,7 +208,10 @@ def sweep_gapped(x, order, room, row, whole_row):
         if n == 0:
             pivot, _ = find_pivot(part, None, ZERO, order, None)
         power_sums(part, pivot, order, room, row)
-        for k in range(order + 1):
+        room[whole_row, 1], left = two_sum(room[whole_row, 1], room[row, 1])
+        rest += left
+        room[whole_row, 0] += room[row, 0]
+        for k in range(2, order + 1):
             room[whole_row, k] += room[row, k]
         room[whole_row, LEAST] = min(room[whole_row, LEAST], room[row, LEAST])
         room[whole_row, MOST] = max(room[whole_row, MOST], room[row, MOST])
@@ -215,6 +219,7 @@ def sweep_gapped(x, order, room, row, whole_row):
         for j in range(part.size, held):
             kept[j - part.size] = kept[j]
         held -= part.size
+    room[whole_row, 1] += rest
     room[whole_row, PIVOT] = pivot
     return n
 

@@ -181,6 +181,7 @@ def row_sums(x, w, pivots, sums, part):
     channels = x.shape[1]
     most = sums.shape[0] - 1
     flat = x.reshape(x.size)
+    rests = np.zeros(channels)
     # A part of the block that stays in the cache between fetching and adding.
     rows = STRETCH_ROWS if channels <= 256 else STRETCH_ROWS // 4
     for j in range(channels):
@@ -193,11 +194,16 @@ def row_sums(x, w, pivots, sums, part):
         sums[0, 0] = _fetch(flat[first * channels : last * channels])
         _add_rows(x, w, first, last, pivots, part)
         if last % STRETCH_ROWS == 0 or last == x.shape[0]:
+            for j in range(channels):
+                sums[1, j], left = two_sum(sums[1, j], part[1, j])
+                rests[j] += left
             for k in range(1, most):
                 for j in range(channels):
-                    sums[k, j] += part[k, j]
+                    if k > 1:
+                        sums[k, j] += part[k, j]
                     part[k, j] = 0.0
     for j in range(channels):
+        sums[1, j] += rests[j]
         sums[0, j] = part[0, j]
         sums[most, j] = part[most, j]
 

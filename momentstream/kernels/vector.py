@@ -106,9 +106,9 @@ def _join(table, a, b, order, weighted, target):
     offset_a = -share_b * delta
     offset_b = share_a * delta
     for k in range(2, order + 1):
-        table[target, SUMS + k] = moved_sum(table, a, k, offset_a) + moved_sum(
-            table, b, k, offset_b
-        )
+        total = moved_sum(table, a, k, offset_a) + moved_sum(table, b, k, offset_b)
+        # What a removal left may be no moments of anything: even sums stay at zero at least.
+        table[target, SUMS + k] = 0.0 if k % 2 == 0 and total < 0.0 else total
     table[target, MEAN] = mean
     table[target, REST] = rest
     table[target, SCALE] = table[a, SCALE]

@@ -10,12 +10,12 @@ import numpy as np
 _ALLOWANCE = 256 * 2.0**-52
 
 
-def standardized_hankel(central):
-    """Hankel matrix of the standardized moments, from central moments of order 0 .. p."""
-    deviation = np.sqrt(central[2])
-    top = (len(central) - 1) // 2
-    moments = [m / deviation**k for k, m in enumerate(central)]
-    return np.array([[moments[i + j] for j in range(top + 1)] for i in range(top + 1)])
+def _standardized(central):
+    """Central moments in units of the standard deviation; powers of two keep them in range."""
+    units = int(np.frexp(central[2])[1]) // 2
+    scaled = [float(np.ldexp(m, -k * units)) for k, m in enumerate(central)]
+    deviation = np.sqrt(scaled[2])
+    return [np.float64(m) / deviation**k for k, m in enumerate(scaled)]
 
 
 def violated(central):
@@ -31,21 +31,23 @@ def violated(central):
             if central[k] != 0.0:
                 return f"central moment {k} = 0 where the variance is 0 (it is {central[k]:.6g})"
         return None
-    if len(central) > 4:
-        skewness = central[3] / central[2] ** 1.5
-        kurtosis = central[4] / central[2] ** 2
-        if kurtosis < (skewness**2 + 1.0) * (1.0 - _ALLOWANCE):
-            return (
-                "kurtosis >= skewness**2 + 1 (kurtosis with the normal law's 3 in it is "
-                f"{kurtosis:.6g}, skewness**2 + 1 is {skewness**2 + 1.0:.6g})"
-            )
-    if len(central) > 6:
-        hankel = standardized_hankel(central)
+    with np.errstate(all="ignore"):
+        moments = _standardized(central)
+        if len(moments) > 4:
+            skewness, kurtosis = moments[3], moments[4]
+            least = skewness * skewness + 1.0
+            if kurtosis < least * (1.0 - _ALLOWANCE):
+                return (
+                    "kurtosis >= skewness**2 + 1 (kurtosis with the normal law's 3 in it is "
+                    f"{kurtosis:.6g}, skewness**2 + 1 is {least:.6g})"
+                )
+        top = (len(moments) - 1) // 2
+        hankel = np.array([[moments[i + j] for j in range(top + 1)] for i in range(top + 1)])
+    if top > 2 and np.all(np.isfinite(hankel)):
         values = np.linalg.eigvalsh(hankel)
         if values[0] < -_ALLOWANCE * values[-1]:
-            order = 2 * (len(hankel) - 1)
             return (
-                f"the Hankel matrix of the standardized moments to order {order} has no negative "
+                f"the Hankel matrix of the standardized moments to order {2 * top} has no negative "
                 f"eigenvalue (its least is {values[0]:.6g})"
             )
     return None

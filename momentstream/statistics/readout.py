@@ -67,7 +67,9 @@ def _variance_divided(view, ddof):
 def _weight_ratios(view):
     """``v[j]``: the sum of w**j over W**j, for j = 2 .. 4; free of the weights' scale."""
     v = view.vector
-    return [None, None, *(v.powers[j - 2] / v.weight**j for j in (2, 3, 4))]
+    square = v.weight * v.weight
+    below = (square, square * v.weight, square * square)
+    return [None, None, *(power / w for power, w in zip(v.powers, below, strict=True))]
 
 
 def _k_statistic_in_units(view, k):
@@ -92,7 +94,10 @@ def _size(values):
 
 def _half_power(variance, k):
     """``variance ** (k / 2)``, by a square root that keeps powers of two exact."""
-    power = variance ** (k // 2)
+    # Multiplied out: a library's power is not rounded alike at every scale.
+    power = np.ones_like(variance)
+    for _ in range(k // 2):
+        power = power * variance
     return power * np.sqrt(variance) if k % 2 else power
 
 

@@ -9,7 +9,7 @@ import numpy as np
 from ..algebra import cumulants as _cumulants
 from ..algebra.central import MomentVector, affine, in_units, shift
 from ..display.page import table
-from ..display.text import columns, number, one_line
+from ..display.text import columns, label_text, number, one_line
 from .feasibility import violated
 from .readout import Statistics, View
 
@@ -146,7 +146,7 @@ class Summary(Statistics):
         1.0182337649086284
         """
         mean = _finite_number(mean, "mean")
-        central = [_finite_number(m, f"central[{i}]") for i, m in enumerate(central)]
+        central = _finite_numbers(central, "central")
         count = _checked_count(count)
         if check:
             broken = violated([1.0, 0.0, *central])
@@ -179,10 +179,10 @@ class Summary(Statistics):
         >>> ms.Summary.from_raw([4.0, 28.5]).variance()
         12.5
         """
-        raw = [_finite_number(m, f"raw[{i}]") for i, m in enumerate(raw)]
+        raw = _finite_numbers(raw, "raw")
         if not raw:
             raise ValueError("raw must hold at least the first moment, got none")
-        central = _cumulants.central_from_raw(raw)[2:]
+        central = _in_range(lambda: _cumulants.central_from_raw(raw)[2:], "raw")
         return cls.from_central(raw[0], central, count, check)
 
     @classmethod
@@ -197,10 +197,10 @@ class Summary(Statistics):
         >>> ms.Summary.from_cumulants([3.5, 3.5, 3.5, 3.5]).kurtosis()  # Poisson's law
         0.2857142857142856
         """
-        cumulants = [_finite_number(m, f"cumulants[{i}]") for i, m in enumerate(cumulants)]
+        cumulants = _finite_numbers(cumulants, "cumulants")
         if not cumulants:
             raise ValueError("cumulants must hold at least the first, got none")
-        central = _cumulants.central_from_cumulants(cumulants[1:])
+        central = _in_range(lambda: _cumulants.central_from_cumulants(cumulants[1:]), "cumulants")
         return cls.from_central(cumulants[0], central, count, check)
 
     # -- transforming ------------------------------------------------------------------------
@@ -250,7 +250,8 @@ class Summary(Statistics):
             sums = sums.reshape((order - 1, *np.shape(left.mean)))
             mean = left.mean + right.mean
             rest = left.rest + right.rest
-            vector = MomentVector(np.ones_like(left.weight), mean, rest, scale, sums)
+            weight = np.where((left.weight > 0.0) & (right.weight > 0.0), 1.0, 0.0)
+            vector = MomentVector(weight, mean, rest, scale, sums)
         view = View(
             order, a.shape, None, None, vector, a.minimum + b.minimum, a.maximum + b.maximum
         )
@@ -276,12 +277,12 @@ class Summary(Statistics):
     @property
     def count(self) -> int | NDArray[np.int64] | None:
         """Number of readings (for frequencies the sum of the weights), or None."""
-        return self._data[1]
+        return _own(self._data[1])
 
     @property
     def omitted(self) -> int | NDArray[np.int64]:
         """Number of readings left out as missing."""
-        return self._data[2]
+        return _own(self._data[2])
 
     @property
     def weight(self) -> Value | None:
@@ -295,7 +296,7 @@ class Summary(Statistics):
     @property
     def effective_count(self) -> Value | None:
         """Kish's effective number of readings, W**2 / V2 for reliability weights, or None."""
-        return self._data[3]
+        return _own(self._data[3])
 
     # -- exporting ---------------------------------------------------------------------------
 
@@ -306,7 +307,8 @@ class Summary(Statistics):
         -------
         dict
             ``order shape names count omitted weight mean variance std skewness kurtosis minimum
-            maximum central`` (from the second on), as far as the order goes; undefined is None.
+            maximum central`` (from the second on), as far as the order goes; what is undefined, or
+            beyond the range of doubles, is None.
         """
         fields = {
             "order": self.order,
@@ -347,7 +349,7 @@ class Summary(Statistics):
         ]
         rows = [
             (
-                str(label),
+                label_text(str(label)),
                 number(None if count is None else int(count)),
                 *(number(float(v[i])) for v in values),
             )
@@ -390,11 +392,30 @@ def _finite_number(value, name):
         number = float(value)
     except (TypeError, ValueError):
         raise TypeError(f"{name} must be a number, got {value!r}") from None
-    if isinstance(value, str):
+    except OverflowError:
+        raise ValueError(f"{name} must be within the range of doubles, got {value!r}") from None
+    if isinstance(value, (str, bytes, bytearray)):
         raise TypeError(f"{name} must be a number, got {value!r}")
     if not np.isfinite(number):
         raise ValueError(f"{name} must be finite, got {value!r}")
     return number
+
+
+def _finite_numbers(values, name):
+    if not hasattr(values, "__iter__") or isinstance(values, (str, bytes, bytearray)):
+        raise TypeError(f"{name} must be a sequence of numbers, got {values!r}")
+    return [_finite_number(value, f"{name}[{i}]") for i, value in enumerate(values)]
+
+
+def _in_range(convert, name):
+    """Central moments from others; those of the user are to blame where they have no doubles."""
+    try:
+        central = [float(m) for m in convert()]
+    except OverflowError:
+        central = [np.inf]
+    if not np.all(np.isfinite(central)):
+        raise ValueError(f"{name} give central moments beyond the range of doubles")
+    return central
 
 
 def _checked_count(count):
@@ -409,13 +430,18 @@ def _checked_count(count):
     return value
 
 
+def _own(value):
+    """A value nobody can change the summary through."""
+    return value.copy() if isinstance(value, np.ndarray) else value
+
+
 def _json(value):
-    """Python numbers and lists; None for nan."""
+    """Python numbers and lists; None for what JSON has no number for: nan and infinities."""
     if value is None:
         return None
     if np.ndim(value) == 0:
         value = value.item() if hasattr(value, "item") else value
-        return None if value != value else value
+        return None if isinstance(value, float) and not np.isfinite(value) else value
     return [_json(part) for part in value]
 
 
