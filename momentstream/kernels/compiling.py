@@ -14,6 +14,9 @@ from numba.extending import intrinsic
 
 # Sums may be reordered and fused by the vectoriser; NaN and infinity keep their meaning.
 REORDER = {"reassoc", "contract", "nsz"}
+# Said for every function: a function that leaves it open takes it from whoever compiles it first,
+# and sums that keep what rounding leaves would be reordered away.
+_DEFAULTS = {"error_model": "numpy", "fastmath": False}
 
 
 PLAIN_PYTHON = bool(vars(numba.config)["DISABLE_JIT"])
@@ -25,7 +28,7 @@ def compiled(function=None, **options):
         return lambda function: compiled(function, **options)
     if PLAIN_PYTHON:
         return np.errstate(all="ignore")(function)
-    options.setdefault("error_model", "numpy")
+    options = _DEFAULTS | options
     try:
         return numba.njit(nogil=True, cache=True, **options)(function)
     except (
@@ -38,7 +41,7 @@ def internal(function=None, **options):
     """``compiled`` for what only kernels call: no entry from Python, no file of its own."""
     if function is None:
         return lambda function: internal(function, **options)
-    options.setdefault("error_model", "numpy")
+    options = _DEFAULTS | options
     return numba.njit(nogil=True, no_cpython_wrapper=True, no_cfunc_wrapper=True, **options)(
         function
     )
