@@ -224,12 +224,23 @@ def settled_by_sweep(w, order, room, row):
         room[row, LIGHTEST] > 0.0 and SMALLEST_WEIGHT < weight < LARGEST_WEIGHT
     ):
         return False
-    error = room[row, 1] / weight
     return (
         SMALLEST < room[row, order] < LARGEST
-        and weight * error * error <= room[row, 2] * _tolerance(order)
+        and _pivot_is_near(room, row, room[row, MOST] - room[row, LEAST], order)
         and room[row, LEAST] != room[row, MOST]
     )
+
+
+@internal
+def _pivot_is_near(room, row, span, order):
+    """Whether sums about the pivot are as good as sums about the mean would be.
+
+    For the sums the distance counts in standard deviations; for the mean in mean absolute
+    deviations, which are at least the variance over the span of the readings.
+    """
+    error = room[row, 1] / room[row, 0]
+    variance = room[row, 2] / room[row, 0]
+    return error * error <= variance * _tolerance(order) and abs(error) * span <= 4.0 * variance
 
 
 @internal
@@ -292,7 +303,6 @@ def _sweep_again(x, low, w, order, room, row, by_rows):
     """
     keep_apart()
     n = x.size
-    tolerance = _tolerance(order)
     swept = low is None
     if low is not None:
         room[row, LEAST] = room[row, MOST] = x[0]
@@ -358,7 +368,9 @@ def _sweep_again(x, low, w, order, room, row, by_rows):
             pivot, pivot_rest = find_pivot(x, low, scale, order, by_rows)
             continue
         error = room[row, 1] / room[row, 0]
-        if room[row, 0] * error * error > room[row, 2] * tolerance and closer < 4:
+        first, second = factors_of(scale)
+        span = most * first * second - least * first * second
+        if closer < 4 and not _pivot_is_near(room, row, span, order):
             closer += 1
             if low is not None:
                 pivot, pivot_rest = two_sum(pivot, pivot_rest + error)
