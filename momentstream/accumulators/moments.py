@@ -10,6 +10,7 @@ from ..algebra import central as _central
 from ..codec import CONTINUED, register
 from ..display.text import one_line
 from ..errors import MergeError, NonFiniteError
+from ..statistics.feasibility import violated
 from ..statistics.readout import Statistics, View, checked_degree
 from ..statistics.summary import Summary, affine_view, scaled_vector
 from .base import Accumulator
@@ -28,6 +29,7 @@ if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
     from ..statistics.readout import Value
+
 
 _FLUSH = 1024
 
@@ -531,6 +533,10 @@ class Moments(Accumulator, Statistics):
         order = len(moments) + 1
         if order > 16:
             raise ValueError(f"central must hold at most 15 moments, got {len(moments)}")
+        for place in np.ndindex(*level.shape):
+            broken = violated([1.0, 0.0, *(float(values[place]) for values in moments)])
+            if broken:
+                raise ValueError(f"central must be moments of something: they break {broken}")
         self = cls(order, shape=level.shape)
         stream = self._stream
         lead = stream.tally.shape[:-1]

@@ -8,6 +8,8 @@ Kenney & Keeping (1951).  Reliability weights: Rimoldini (2014), Astronomy and C
 
 from math import comb, prod
 
+import numpy as np
+
 from .central import moved
 
 
@@ -73,13 +75,20 @@ def weighted_k_statistic(k, v, m):
 
     ``v[j]`` is the sum of w**j over the j-th power of the sum of w, for j = 2 .. 4.
     """
-    if k == 2:
-        return m[2] / (1 - v[2])
-    if k == 3:
-        return m[3] / (1 - 3 * v[2] + 2 * v[3])
     square = v[2] * v[2]
-    below = (1 - v[2]) * (1 - 6 * v[2] + 8 * v[3] + 3 * square - 6 * v[4])
+    if k == 2:
+        return m[2] / _beyond_rounding(1 - v[2])
+    if k == 3:
+        return m[3] / _beyond_rounding(1 - 3 * v[2] + 2 * v[3])
+    below = _beyond_rounding(1 - v[2]) * _beyond_rounding(
+        1 - 6 * v[2] + 8 * v[3] + 3 * square - 6 * v[4]
+    )
     return (
         (1 - 4 * v[3] + 3 * square) * m[4]
         - 3 * (1 - 2 * v[2] + 4 * v[3] - 3 * square) * (m[2] * m[2])
     ) / below
+
+
+def _beyond_rounding(divisor):
+    """A divisor that cancels down from terms of size 1; nan where only their rounding is left."""
+    return np.where(divisor > 2.0**-47, divisor, np.nan)

@@ -52,6 +52,8 @@ def central_moments(view, degree):
 
 def _variance_divided(view, ddof):
     """The variance in units of ``2**(2 * scale)``."""
+    if isinstance(ddof, (str, bytes)) or np.ndim(ddof) or not np.isreal(ddof):
+        raise TypeError(f"ddof must be a number, got {ddof!r}")
     v = view.vector
     loss = ddof
     if ddof != 0:
@@ -61,7 +63,8 @@ def _variance_divided(view, ddof):
         # One reading alone: W - V2 / W is zero, and rounds to something else.
         loss = np.where((view.readings < 2) & (ddof > 0), np.inf, loss)
     divisor = v.weight - loss
-    return v.sums[0] / np.where(divisor > 0.0, divisor, np.nan)
+    # A divisor that is rounding alone says nothing.
+    return v.sums[0] / np.where(divisor > _ROUNDING * v.weight, divisor, np.nan)
 
 
 def _weight_ratios(view):
@@ -84,6 +87,7 @@ def _k_statistic_in_units(view, k):
 
 
 _NOTHING = 10_000.0
+_ROUNDING = 2.0**-49
 
 
 def _size(values):
