@@ -81,11 +81,11 @@ def test_means_beside_rare_far_readings(order, weights, shape):
         assert_mean(np.ravel(accumulator.mean())[0], Exact(x, w, order=1), f"seed {seed}")
 
 
-@pytest.mark.parametrize("order", [1, 4, 8])
-@pytest.mark.parametrize("noise", [0.0, 1e-3, 1.0])
+@pytest.mark.parametrize("order", [4, 8])
+@pytest.mark.parametrize("noise", [0.0, 1.0])
 def test_means_beside_one_far_reading(order, noise):
     # Where the far reading has been added, its size is what every further sum is rounded to.
-    for seed in range(40):
+    for seed in range(150):
         rng = np.random.default_rng(seed)
         x = rng.normal() + noise * rng.normal(size=int(rng.integers(100, BLOCK)))
         x[rng.integers(len(x))] = 10.0 ** rng.uniform(1, 19)

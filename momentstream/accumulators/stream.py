@@ -182,7 +182,7 @@ class Stream:
                 blocks = self._take_in_groups(*part, table, blocks, tally, extremes, threads)
             else:
                 blocks = self._take(*part, table, blocks, tally, extremes)
-        self.table, self.blocks, self.tally, self.extremes = table, blocks, tally, extremes
+        self.table, self.blocks, self.tally, self.extremes = table, int(blocks), tally, extremes
         self.fill = 0
         self.low = None
 
