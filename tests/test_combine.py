@@ -296,6 +296,23 @@ def test_affine_of_far_readings_keeps_their_spread():
     assert_close(mapped.mean(), exact.mean, ulps=1, relative_to=1.7e9 / 2**20, label="mean")
 
 
+@pytest.mark.parametrize(("order", "offset"), [(4, 1e200), (4, -1e300), (16, 1e25), (16, 1e300)])
+def test_affine_by_an_offset_far_above_the_spread(order, offset):
+    near = ms.Moments(order).update([1.0, 2.0, 4.0])
+    mapped = near.affine(1.0, offset)
+    assert mapped.mean() == offset
+    for k in range(2, order + 1):
+        assert mapped.central(k) == near.central(k)
+    doubled = mapped.merge(near.affine(1.0, offset))
+    assert doubled.central(order) == near.central(order)
+
+
+@pytest.mark.parametrize(("scale", "offset"), [(2.0, 0.0), (2e300, 1e300), (-1.0, 0.5), (0.0, 3.0)])
+def test_affine_of_constants_is_a_constant(scale, offset):
+    mapped = ms.Moments().update([1.0, 1.0]).affine(scale, offset)
+    assert mapped == ms.Moments().update([scale + offset] * 2)
+
+
 def test_affine_merges_and_is_fed():
     celsius = ms.Moments().update([10.0, 20.0])
     fahrenheit = celsius.affine(1.8, 32.0).merge(ms.Moments().update(59.0)).update(68.0)

@@ -1103,6 +1103,29 @@ def test_arrays_are_converted_in_bounded_memory(make):
     assert most_memory(lambda: fed(values, nonfinite="omit")) < 12 * MEGABYTE
 
 
+@pytest.mark.parametrize(
+    "source",
+    [
+        lambda n: fed(range(n)),
+        lambda n: fed([0.5] * n),
+        lambda n: fed((1, 2.5) * (n // 2)),
+        lambda n: fed([0.5] * n, 2.0, weights="reliability"),
+    ],
+    ids=["range", "list", "mixed tuple", "one weight"],
+)
+def test_lists_are_converted_in_bounded_memory(source):
+    # The list itself takes 8 bytes an item; beyond it stands a stretch of 65536 readings.
+    n = 400_000
+    assert most_memory(lambda: source(n)) < 8 * n + 8 * MEGABYTE
+
+
+@pytest.mark.parametrize("kind", ["frequency", "reliability"])
+def test_weights_are_converted_in_bounded_memory(kind):
+    x = np.ones(4_000_000)
+    for w in (3, np.ones(len(x), np.int8), np.ones(2 * len(x))[::2], np.broadcast_to(2.0, len(x))):
+        assert most_memory(lambda w=w: fed(x, w, weights=kind)) < 12 * MEGABYTE
+
+
 @pytest.mark.parametrize("transform", TRANSFORMS)
 def test_transforms_take_bounded_memory(transform):
     values = np.ones(4_000_000)

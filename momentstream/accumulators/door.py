@@ -22,6 +22,8 @@ def _regular(values):
     """The numbers in nested lists, flat, and their shape; ragged lists are a ValueError."""
     if isinstance(values, np.ndarray):
         return list(check_dtype(values).ravel()), values.shape
+    if isinstance(values, range):
+        return values, (len(values),)
     if not isinstance(values, (list, tuple)):
         return [values], ()
     if not any(map(_is_nest, set(map(type, values)))):
@@ -102,7 +104,7 @@ def stretches(values, weights, form):
         if form.shape:
             form.rows(np.shape(values))
         x, low = pack_numbers([values])
-        return True, iter([(x, low, weights_of(weights, 1, form.whole))])
+        return True, iter([(x, low, Weights(weights, 1, form.whole).part(0, 1))])
     if values is None or isinstance(values, (str, bytes, bytearray, dict, set, frozenset)):
         raise refuse_type(values)
     if isinstance(values, Number) or (isinstance(values, np.generic) and not values.shape):
@@ -134,62 +136,104 @@ def _is_array(values):
     )
 
 
-def weights_of(weights, n, whole):
-    """Weights as an array of n doubles, or None."""
-    if weights is None:
-        return None
-    if isinstance(weights, (str, bytes, bytearray, dict, set, frozenset)):
-        raise refuse_type(weights, "weights")
-    if hasattr(weights, "__next__"):
-        weights = list(islice(weights, n + 1))
-    if isinstance(weights, (list, tuple, range, deque)):
-        w = _exact_enough(*pack_numbers(list(weights), "weights"), whole)
-    elif np.ndim(weights) == 0 and not _is_array(weights):
-        return np.full(n, _exact_enough(*pack_numbers([weights], "weights"), whole)[0])
-    else:
-        try:
-            data, mask = read_column(weights)
-        except TypeError as error:
-            raise TypeError(str(error).replace("values", "weights", 1)) from None
-        if mask is not None and mask.any():
-            raise ValueError(f"weights must not be missing, one is at {int(np.argmax(mask))}")
-        if whole and data.dtype.kind in "iu" and data.dtype.itemsize == 8:
-            _exact_enough(*split_integers(data.reshape(-1), Room()), whole)
-        if data.ndim == 0:
-            return np.full(n, float(data))
-        w = writable(np.ascontiguousarray(data, dtype=np.float64).reshape(-1))
-    if len(w) != n:
-        raise ValueError(f"weights must have one entry a reading: {n} readings, {len(w)} weights")
-    return w
+class Weights:
+    """The weights of ``n`` readings, made doubles a stretch at a time where they are not."""
+
+    __slots__ = ("_array", "_single")
+
+    def __init__(self, weights, n, whole):
+        self._single = None  # one number for all, repeated over a stretch
+        self._array = None
+        if weights is None:
+            return
+        if isinstance(weights, (str, bytes, bytearray, dict, set, frozenset)):
+            raise refuse_type(weights, "weights")
+        if hasattr(weights, "__next__"):
+            weights = list(islice(weights, n + 1))
+        if isinstance(weights, (list, tuple, range, deque)):
+            self._array = _exact_enough(*pack_numbers(list(weights), "weights"), whole)
+        elif np.ndim(weights) == 0 and not _is_array(weights):
+            one = _exact_enough(*pack_numbers([weights], "weights"), whole)[0]
+            self._single = np.full(min(n, STRETCH), one)
+            return
+        else:
+            data = _weight_column(weights, whole)
+            if data.ndim == 0:
+                self._single = np.full(min(n, STRETCH), float(data))
+                return
+            flags = data.flags
+            as_it_is = data.dtype == np.float64 and flags.c_contiguous and flags.aligned
+            data = data.reshape(-1)
+            self._array = writable(data) if as_it_is and data.dtype.isnative else data
+        if len(self._array) != n:
+            raise ValueError(
+                f"weights must have one entry a reading: {n} readings, {len(self._array)} weights"
+            )
+
+    @property
+    def whole(self):
+        """Whether any number of them is at hand at once."""
+        return self._single is None and (self._array is None or self._array.dtype == np.float64)
+
+    def part(self, start, stop):
+        """The weights from ``start`` to ``stop``, at most a stretch of them unless ``whole``."""
+        if self._single is not None:
+            return self._single[: stop - start]
+        if self._array is None:
+            return None
+        return writable(np.ascontiguousarray(self._array[start:stop], dtype=np.float64))
 
 
-def _exact_enough(w, low, whole):
+def _weight_column(weights, whole):
+    try:
+        data, mask = read_column(weights)
+    except TypeError as error:
+        raise TypeError(str(error).replace("values", "weights", 1)) from None
+    if mask is not None and mask.any():
+        raise ValueError(f"weights must not be missing, one is at {int(np.argmax(mask))}")
+    if whole and data.dtype.kind in "iu" and data.dtype.itemsize == 8:
+        flat = data.reshape(-1)
+        for start in range(0, flat.size, STRETCH):
+            _exact_enough(*split_integers(flat[start : start + STRETCH], Room()), whole, start)
+    return data
+
+
+def _exact_enough(w, low, whole, start=0):
     """Weights, unless they are frequencies that doubles do not count exactly."""
     if whole and low is not None:
         place = int(np.flatnonzero(low)[0])
         raise ValueError(
             "a frequency among the weights must be at most 2**53, "
-            f"got about {w[place]:.17g} at {place}"
+            f"got about {w[place]:.17g} at {start + place}"
         )
     return w
 
 
 def _array_stretches(data, mask, weights, form):
     n = form.rows(data.shape)
-    w = weights_of(weights, n, form.whole)
+    w = Weights(weights, n, form.whole)
     if mask is not None and not mask.any():
         mask = None
     as_it_is = data.dtype == np.float64 or (
-        data.dtype == np.float32 and not form.shape and w is None
+        data.dtype == np.float32 and not form.shape and weights is None
     )
     flags = data.flags
     if as_it_is and mask is None and flags.c_contiguous and flags.aligned and data.dtype.isnative:
-        return True, iter([(form.fold(writable(data).reshape(-1)), None, w)])
+        x = form.fold(writable(data).reshape(-1))
+        if n <= STRETCH or w.whole:
+            return True, iter([(x, None, w.part(0, n))])
+        return False, _sliced(x, w)
     if n <= CHUNK and data.size <= STRETCH:
         gone = None if mask is None else np.ascontiguousarray(mask).reshape(-1)
         x, low = _converted(np.ascontiguousarray(data).reshape(-1), gone, Room())
-        return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
+        return True, iter([(form.fold(x), None if low is None else form.fold(low), w.part(0, n))])
     return False, _converted_stretches(data, mask, w, form, n)
+
+
+def _sliced(x, w):
+    for start in range(0, len(x), STRETCH):
+        part = x[start : start + STRETCH]
+        yield part, None, w.part(start, start + len(part))
 
 
 def _converted_stretches(data, mask, w, form, n):
@@ -214,7 +258,7 @@ def _converted_stretches(data, mask, w, form, n):
             take = flat.size // size * size
             x, low = _converted(flat[:take], None if gone is None else gone[:take], room)
             count = take // size
-            part_w = None if w is None else w[done : done + count]
+            part_w = w.part(done, done + count)
             yield form.fold(x), None if low is None else form.fold(low), part_w
             done += count
             kept, masks = [flat[take:]], [None if gone is None else gone[take:]]
@@ -254,15 +298,25 @@ def _converted(flat, mask, room):
 
 
 def _list_stretches(values, weights, form):
-    values = values if isinstance(values, (list, tuple)) else list(values)
+    values = values if isinstance(values, (list, tuple, range)) else list(values)
     try:
         flat, shape = _regular(values)
     except RecursionError:
         raise ValueError("values must be lists of finite depth, got one within itself") from None
     n = form.rows(shape)
-    x, low = pack_numbers(flat)
-    w = weights_of(weights, n, form.whole)
-    return True, iter([(form.fold(x), None if low is None else form.fold(low), w)])
+    w = Weights(weights, n, form.whole)
+    return n * (form.size or 1) <= STRETCH, _list_parts(flat, n, w, form)
+
+
+def _list_parts(flat, n, w, form):
+    size = form.size or 1
+    rows = max(1, STRETCH // size)
+    for start in range(0, n, rows):
+        stop = min(start + rows, n)
+        part = flat[start * size : stop * size]
+        part = part if isinstance(part, list) else list(part)
+        x, low = pack_numbers(part, start=start * size)
+        yield form.fold(x), None if low is None else form.fold(low), w.part(start, stop)
 
 
 def _iterator_stretches(values, weights, form):
@@ -290,7 +344,7 @@ def _iterator_stretches(values, weights, form):
                     f" (for so many at once: {shape})"
                 )
         x, low = pack_numbers(flat, start=done * (form.size or 1))
-        w = weights_of(part, len(items), form.whole)
+        w = Weights(part, len(items), form.whole).part(0, len(items))
         yield form.fold(x), None if low is None else form.fold(low), w
         done += len(items)
 
@@ -300,7 +354,7 @@ def _frame_stretches(values, weights, form):
     if form.shape and len(form.shape) != 1:
         raise ValueError(f"a frame holds readings of one axis, the accumulator has {form.shape}")
     n = len(columns[0][0]) if columns else 0
-    w = weights_of(weights, n if form.shape else n * len(columns), form.whole)
+    w = Weights(weights, n if form.shape else n * len(columns), form.whole)
 
     def read():
         rows = max(1, STRETCH // max(1, len(columns)))
@@ -317,7 +371,7 @@ def _frame_stretches(values, weights, form):
                         low = np.zeros_like(x)
                     low[:, j] = rest
             size = 1 if form.shape else len(columns)
-            part_w = None if w is None else w[start * size : stop * size]
+            part_w = w.part(start * size, stop * size)
             flat = None if low is None else form.fold(low.reshape(-1))
             yield form.fold(x.reshape(-1)), flat, part_w
 

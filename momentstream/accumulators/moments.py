@@ -6,36 +6,33 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..algebra import central as _central
 from ..codec import CONTINUED, register
-from ..display.text import one_line
 from ..errors import MergeError, NonFiniteError
-from ..statistics.feasibility import violated
-from ..statistics.readout import Statistics, View, checked_degree
-from ..statistics.summary import Summary, affine_view, scaled_vector
+from ..statistics.readout import View, checked_degree
+from ..statistics.summary import affine_view, scaled_vector
 from .base import Accumulator
 from .conversion import pack_floats
+from .described import Described
 from .door import STRETCH, Form, stretches
+from .given import checked_moments, guard
 from .moments_payload import MOST_COUNTED, WEIGHTS, read_payload, write_payload
 from .rows import removed_rows, rows_of, vector_of
-from .settings import checked_order, checked_shape, choice, extreme_array, finite_array
-from .stream import POLICIES, Refusal, Stream, even
+from .settings import checked_order, checked_shape, choice
+from .stream import POLICIES, Refusal, Stream
 from .transforms import TRANSFORMS, transformed
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
     from typing import Self
 
-    from numpy.typing import ArrayLike, NDArray
-
-    from ..statistics.readout import Value
+    from numpy.typing import ArrayLike
 
 
 _FLUSH = 1024
 
 
 @register(1)
-class Moments(Accumulator, Statistics):
+class Moments(Accumulator, Described):
     """Count, mean and central moments of everything that was fed, in one pass and bounded memory.
 
     =============  =================================================================
@@ -516,39 +513,13 @@ class Moments(Accumulator, Statistics):
         >>> ms.Moments.from_central(4.0, [12.5, 45.0], count=4).skewness()
         1.0182337649086284
         """
-        count = checked_degree(count, least=1, name="count")
-        if count >= MOST_COUNTED:
-            raise ValueError(f"count must be below 2**63 - 1, got {count}")
-        level = finite_array("mean", mean)
-        if not hasattr(central, "__iter__"):
-            raise TypeError(f"central must be a sequence of moments, got {central!r}")
-        moments = [finite_array(f"central[{i}]", m, level.shape) for i, m in enumerate(central)]
-        for i, values in enumerate(moments):
-            if i % 2 == 0 and np.any(values < 0.0):
-                raise ValueError(f"central moment {i + 2} must not be negative, got {values}")
-            if count == 1 and np.any(values != 0.0):
-                raise ValueError(
-                    f"one reading has no spread, but central moment {i + 2} is {values}"
-                )
-        order = len(moments) + 1
-        if order > 16:
-            raise ValueError(f"central must hold at most 15 moments, got {len(moments)}")
-        for place in np.ndindex(*level.shape):
-            broken = violated([1.0, 0.0, *(float(values[place]) for values in moments)])
-            if broken:
-                raise ValueError(f"central must be moments of something: they break {broken}")
-        self = cls(order, shape=level.shape)
+        level, moments, ends = checked_moments(mean, central, count, minimum, maximum)
+        self = cls(len(moments) + 1, shape=level.shape)
         stream = self._stream
         lead = stream.tally.shape[:-1]
-        ends = [
-            extreme_array(name, end, level.shape)
-            for name, end in (("minimum", minimum), ("maximum", maximum))
-        ]
-        if np.any((ends[0] > level) | (ends[1] < level)):
-            raise ValueError(f"minimum and maximum must enclose the mean, got {ends}")
         moments = [values.reshape(lead) for values in moments]
-        if even(order) != order:
-            moments.append(_guard(moments, level.reshape(lead)))
+        if stream.order != self._order:
+            moments.append(guard(moments, level.reshape(lead)))
         with np.errstate(all="ignore"):
             vector = scaled_vector(level.reshape(lead), moments, float(count))
             tally = np.zeros_like(stream.tally)
@@ -556,111 +527,6 @@ class Moments(Accumulator, Statistics):
             self._replace(rows_of(vector, stream), tally)
         self._stream.extremes[...] = np.stack([end.reshape(lead) for end in ends], axis=-1) + 0.0
         return self
-
-    # -- knowing -----------------------------------------------------------------------------
-
-    @property
-    def order(self) -> int:
-        """The highest moment kept."""
-        return self._order
-
-    @property
-    def shape(self) -> tuple[int, ...]:
-        """The shape of one reading."""
-        return self._shape
-
-    @property
-    def names(self) -> tuple[str, ...] | None:
-        """The names of the channels, a tuple, or None."""
-        return self._names
-
-    @property
-    def weights(self) -> str | None:
-        """The kind of weights: None, "frequency" or "reliability"."""
-        return self._weights
-
-    @property
-    def nonfinite(self) -> str:
-        """What a missing reading does: "raise", "omit" or "propagate"."""
-        return self._nonfinite
-
-    @property
-    def transform(self) -> str | None:
-        """What is done to readings first: None, "log", "reciprocal" or "abs"."""
-        return self._transform
-
-    @property
-    def count(self) -> int | NDArray[np.int64]:
-        """Readings taken in, an int, or array of ``shape``; of frequencies the sum."""
-        return self._whole_number(self._settle().tally[..., 0])
-
-    @property
-    def omitted(self) -> int | NDArray[np.int64]:
-        """Readings left out as missing.  int, or array of ``shape``."""
-        return self._whole_number(self._settle().tally[..., 1])
-
-    @property
-    def weight(self) -> Value:
-        """The sum of the weights (without weights: the count).  float, or array of ``shape``."""
-        view = self._view()
-        with np.errstate(all="ignore"):
-            return self._read(_central.shift(view.vector.weight, view.vector.weight_scale), view)
-
-    @property
-    def effective_count(self) -> Value:
-        """How many readings of equal weight would tell as much (Kish): W**2 / V2 for reliability
-        weights, else the weight.  float, or array of ``shape``; 0 when empty."""
-        view = self._view()
-        if self._weights != "reliability":
-            return self.weight
-        with np.errstate(all="ignore"):
-            v = view.vector
-            value = v.weight * v.weight / np.where(v.weight > 0.0, v.powers[0], 1.0)
-            return self._read(value, view)
-
-    def summary(self) -> Summary:
-        """The immutable summary of what has been fed so far.
-
-        Examples
-        --------
-        >>> import momentstream as ms
-        >>> print(ms.Moments().update([1.0, 2.0, 3.0, 10.0]).summary())
-        count            4
-        mean             4
-        variance      12.5
-        std        3.53553
-        skewness   1.01823
-        kurtosis   -0.7696
-        minimum          1
-        maximum         10
-        """
-        return Summary._make(
-            self._view(),
-            count=self.count,
-            omitted=self.omitted,
-            effective=self.effective_count,
-            names=self._names,
-        )
-
-    def __repr__(self) -> str:
-        fields: list[tuple[str, Any]] = [("order", str(self._order))]
-        if self._shape:
-            fields.append(("shape", str(self._shape)))
-        fields.append(("count", _span(self.count)))
-        for name in ("weights", "transform"):
-            if getattr(self, name) is not None:
-                fields.append((name, repr(getattr(self, name))))
-        omitted = self.omitted
-        if np.any(omitted):
-            fields.append(("omitted", _span(omitted)))
-        if not self._shape:
-            for name, least in (("mean", 1), ("std", 2), ("skewness", 3), ("kurtosis", 4)):
-                if self._order >= least:
-                    fields.append((name, getattr(self, name)()))
-        return one_line("Moments", fields)
-
-    def _repr_html_(self) -> str:
-        return self.summary()._repr_html_()
 
     # -- state -------------------------------------------------------------------------------
 
@@ -728,11 +594,6 @@ class Moments(Accumulator, Statistics):
                 "Nothing was changed"
             )
 
-    def _whole_number(self, values):
-        if self._shape == ():
-            return int(values)
-        return values.reshape(self._shape).copy()
-
     # -- bytes -------------------------------------------------------------------------------
 
     def _write(self, writer, resume):
@@ -744,18 +605,5 @@ class Moments(Accumulator, Statistics):
         return read_payload(cls, reader, bool(flags & CONTINUED))
 
 
-def _guard(moments, like):
-    """An even moment above an odd order: it only guards the scale, and is never read."""
-    if not moments:
-        return np.zeros_like(like)
-    second = moments[0]
-    return second ** ((len(moments) + 2) / 2)
-
-
 def _counts(tally, which):
     return int(tally[which]) if tally.ndim == 1 else tally[:, which].tolist()
-
-
-def _span(values):
-    least, most = int(np.min(values)), int(np.max(values))
-    return f"{least:,}" if least == most else f"{least:,}..{most:,}"

@@ -150,15 +150,18 @@ def affine(vector, scale, offset):
     units = vector.scale + exponent
     product, error = _two_product(vector.mean, fraction)
     mean, rest = two_sum(product, error + vector.rest * fraction)
-    # Bring the offset and the mean to common units before they are added.
-    far = np.frexp(offset)[1]
-    common = np.where(offset == 0.0, units, np.maximum(units + np.frexp(mean)[1], far))
-    common = np.where(mean == 0.0, np.where(offset == 0.0, units, np.maximum(units, far)), common)
+    # Units of the spread, as long as mean and offset have room in them.
+    top = np.maximum(
+        np.where(mean == 0.0, units, units + np.frexp(mean)[1]),
+        np.where(offset == 0.0, units, np.frexp(offset)[1]),
+    )
+    common = np.maximum(units, top - 1020)
     mean, rest = shift(mean, units - common), shift(rest, units - common)
     mean, error = two_sum(mean, shift(np.asarray(offset, float), -common))
     mean, rest = two_sum(mean, error + rest)
     order = np.arange(2, len(vector.sums) + 2).reshape((-1,) + (1,) * np.ndim(vector.mean))
-    sums = shift(vector.sums * fraction**order, order * (units - common))
+    # Adding zero: a constant mirrored is a constant, without negative zeros.
+    sums = shift(vector.sums * fraction**order, order * (units - common)) + 0.0
     return vector._replace(mean=mean, rest=rest, scale=common + 0.0, sums=sums)
 
 

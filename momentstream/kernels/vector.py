@@ -165,7 +165,9 @@ def to_plain_scale(table, row, order, weighted):
             weight_scale = 0.0
     if scale != 0.0:
         top = ldexp(table[row, SUMS + order], int(order * scale))
-        if SMALLEST < top < LARGEST and is_finite(ldexp(table[row, MEAN], int(scale))):
+        constant = table[row, SUMS + 2] == 0.0 and table[row, SUMS + order] == 0.0
+        safe = constant or SMALLEST < top < LARGEST
+        if safe and is_finite(ldexp(table[row, MEAN], int(scale))):
             rescale(table, row, order, weighted, 0.0, weight_scale)
 
 
