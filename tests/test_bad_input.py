@@ -665,6 +665,8 @@ def test_a_frame_with_two_columns_of_one_name():
 def test_threads(threads):
     errors = (TypeError, ValueError)
     refused(lambda m: m.update([1.0], threads=threads), errors, ["threads", repr(threads)])
+    if threads is not True:  # which equals 1, and does no harm to a single float
+        refused(lambda m: m.update(1.0, threads=threads), errors, ["threads", repr(threads)])
 
 
 # -- merging and removing ------------------------------------------------------------------------

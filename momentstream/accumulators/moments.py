@@ -119,11 +119,14 @@ class Moments(Accumulator, Described):
         self._transform = choice("transform", transform, TRANSFORMS)
         self._form = Form(self._shape, self._names, self._weights)
         self._reading = False  # whether an iterator is being read
-        self._pending: list[float] = []
         # Single floats may wait in a list, where nothing has to be known of them at once.
         self._quick = self._shape == () and weights is None and transform is None
+        self._pending = self._none_pending()
         self._settled = None
         self._stream = self._new_stream()
+
+    def _none_pending(self) -> list[float] | None:
+        return [] if self._quick else None
 
     def _new_stream(self):
         return Stream(self._order, self._weights, self._form.size, self._nonfinite)
@@ -170,12 +173,13 @@ class Moments(Accumulator, Described):
         >>> ms.Moments().update(range(1, 5)).update(10.0).count
         5
         """
-        if type(values) is float and weights is None and values - values == 0.0 and self._quick:
+        if type(values) is float and weights is None and threads == 1 and values - values == 0.0:
             pending = self._pending
-            pending.append(values)
-            if len(pending) == _FLUSH:
-                self._flush()
-            return self
+            if pending is not None:
+                pending.append(values)
+                if len(pending) == _FLUSH:
+                    self._flush()
+                return self
         return self._update(values, weights, threads)
 
     def _update(self, values, weights, threads):
@@ -197,11 +201,11 @@ class Moments(Accumulator, Described):
             self._feed(self._stream, parts, threads)
         else:
             stream = self._stream.copy()
-            quick, self._quick, self._reading = self._quick, False, True
+            self._pending, self._reading = None, True
             try:
                 self._feed(stream, parts, threads)
             finally:
-                self._quick, self._reading = quick, False
+                self._pending, self._reading = self._none_pending(), False
             self._stream = stream
         self._settled = None
         return self
@@ -261,7 +265,7 @@ class Moments(Accumulator, Described):
     def clear(self) -> Self:
         """Forget everything that was fed; returns the accumulator itself."""
         self._idle()
-        self._pending = []
+        self._pending = self._none_pending()
         self._stream = self._new_stream()
         self._settled = None
         return self
@@ -572,7 +576,7 @@ class Moments(Accumulator, Described):
 
     def _replace(self, rows, tally):
         """Become a settled state of these vectors and counts."""
-        self._pending = []
+        self._pending = self._none_pending()
         self._stream = self._new_stream()
         self._settled = None
         self._stream.table[..., 0, :] = rows
