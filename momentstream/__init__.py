@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from . import kernels as kernels
+    from .accumulators.exact_moments import ExactMoments as ExactMoments
     from .accumulators.moments import Moments as Moments
     from .errors import MergeError as MergeError
     from .errors import MomentstreamError as MomentstreamError
@@ -32,6 +33,7 @@ __version__ = "0.1.0"
 # Where each name lives; a name is fetched when it is first asked for, so that importing the
 # package costs next to nothing, and the compiler comes with the first numeric work.
 _HOMES = {
+    "ExactMoments": ".accumulators.exact_moments",
     "MergeError": ".errors",
     "Moments": ".accumulators.moments",
     "MomentstreamError": ".errors",

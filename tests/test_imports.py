@@ -159,7 +159,7 @@ def test_algebra_is_numpy_alone():
     for path in (PACKAGE / "algebra").glob("*.py"):
         for name, line in imports(path):
             top = name.partition(".")[0]
-            assert top in ("numpy", "math", "typing", "itertools") or name.startswith(
+            assert top in ("numpy", "math", "fractions", "typing", "itertools") or name.startswith(
                 "momentstream.algebra"
             ), f"{path.name}:{line} imports {name}"
 
@@ -330,6 +330,36 @@ def test_cache_folders_that_are_none(copy_of_the_package, tmp_path):
 def test_a_cache_is_kept_where_it_can_be(copy_of_the_package):
     appeared = worked(copy_of_the_package)
     kinds = {path.suffix for path in appeared if path.is_file()}
-    assert kinds == {".nbi", ".nbc"}
+    assert kinds == {".nbc"}
     # And the next process finds it.
     assert not worked(copy_of_the_package)
+
+
+def test_compiled_kernels_are_never_taken_for_one_another(tmp_path):
+    from momentstream.kernels.cache import _Files
+
+    one, other = _Files(tmp_path, "kernel-1.py311"), _Files(tmp_path, "kernel-1.py311")
+    assert one.load("f(a)") is None
+    # Processes that start together: each saves what it compiled, and finds the other's.
+    one.save("f(a)", b"code for a")
+    other.save("f(b)", b"code for b")
+    for files in (one, other):
+        assert files.load("f(a)") == b"code for a"
+        assert files.load("f(b)") == b"code for b"
+    assert len(list(tmp_path.iterdir())) == 2
+    # What was cut or mixed up on disk is compiled again, not loaded.
+    first, second = sorted(tmp_path.iterdir())
+    whole = first.read_bytes()
+    for damage in (whole[:-1], whole[:10], b"", second.read_bytes()):
+        first.write_bytes(damage)
+        loaded = one.load("f(a)"), one.load("f(b)")
+        assert loaded.count(None) == 1
+    first.write_bytes(whole)
+    # Kernels of another text are no use, and go.
+    stale = tmp_path / "kernel-1.py311.0123456789abcdef01234567.0123456789abcdef.nbc"
+    stale.write_bytes(whole)
+    one.save("f(a)", b"newer code")
+    assert not stale.exists()
+    assert other.load("f(a)") == b"newer code"
+    one.flush()
+    assert not list(tmp_path.iterdir())

@@ -130,7 +130,7 @@ class Described(Statistics):
             for name, least in (("mean", 1), ("std", 2), ("skewness", 3), ("kurtosis", 4)):
                 if self._order >= least:
                     fields.append((name, getattr(self, name)()))
-        return one_line("Moments", fields)
+        return one_line(type(self).__name__, fields)
 
     def _repr_html_(self) -> str:
         return self.summary()._repr_html_()

@@ -7,19 +7,18 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..codec import CONTINUED, register
-from ..errors import MergeError, NonFiniteError
+from ..errors import MergeError
 from ..statistics.readout import View, checked_degree
 from ..statistics.summary import affine_view, scaled_vector
-from .base import Accumulator
-from .conversion import pack_floats
 from .described import Described
-from .door import STRETCH, Form, stretches
+from .door import Form
+from .fed import FLUSH, Fed
 from .given import checked_moments, guard
 from .moments_payload import MOST_COUNTED, WEIGHTS, read_payload, write_payload
 from .rows import removed_rows, rows_of, vector_of
 from .settings import checked_order, checked_shape, choice
-from .stream import POLICIES, Refusal, Stream
-from .transforms import TRANSFORMS, transformed
+from .stream import POLICIES, Stream
+from .transforms import TRANSFORMS
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -28,11 +27,8 @@ if TYPE_CHECKING:
     from numpy.typing import ArrayLike
 
 
-_FLUSH = 1024
-
-
 @register(1)
-class Moments(Accumulator, Described):
+class Moments(Fed, Described):
     """Count, mean and central moments of everything that was fed, in one pass and bounded memory.
 
     =============  =================================================================
@@ -93,7 +89,6 @@ class Moments(Accumulator, Described):
         "_nonfinite",
         "_order",
         "_pending",
-        "_quick",
         "_reading",
         "_settled",
         "_shape",
@@ -118,15 +113,7 @@ class Moments(Accumulator, Described):
         self._nonfinite = choice("nonfinite", nonfinite, POLICIES)
         self._transform = choice("transform", transform, TRANSFORMS)
         self._form = Form(self._shape, self._names, self._weights)
-        self._reading = False  # whether an iterator is being read
-        # Single floats may wait in a list, where nothing has to be known of them at once.
-        self._quick = self._shape == () and weights is None and transform is None
-        self._pending = self._none_pending()
-        self._settled = None
-        self._stream = self._new_stream()
-
-    def _none_pending(self) -> list[float] | None:
-        return [] if self._quick else None
+        self._begin()
 
     def _new_stream(self):
         return Stream(self._order, self._weights, self._form.size, self._nonfinite)
@@ -177,98 +164,10 @@ class Moments(Accumulator, Described):
             pending = self._pending
             if pending is not None:
                 pending.append(values)
-                if len(pending) == _FLUSH:
+                if len(pending) == FLUSH:
                     self._flush()
                 return self
         return self._update(values, weights, threads)
-
-    def _update(self, values, weights, threads):
-        self._idle()
-        if type(threads) is not int or threads < 1:
-            raise ValueError(f"threads must be an integer of at least 1, got {threads!r}")
-        if (weights is None) != (self._weights is None):
-            if weights is None:
-                raise ValueError(
-                    f"weights are missing: this accumulator has weights={self._weights!r}"
-                )
-            raise ValueError(
-                'weights were given to an accumulator without: make it with weights="frequency" '
-                'or weights="reliability"'
-            )
-        self._flush()
-        single, parts = stretches(values, weights, self._form)
-        if single and self._transform is None:
-            self._feed(self._stream, parts, threads)
-        else:
-            stream = self._stream.copy()
-            self._pending, self._reading = None, True
-            try:
-                self._feed(stream, parts, threads)
-            finally:
-                self._pending, self._reading = self._none_pending(), False
-            self._stream = stream
-        self._settled = None
-        return self
-
-    def _feed(self, stream, parts, threads):
-        done = 0
-        for part in parts if self._transform is None else self._transformed(parts):
-            try:
-                stream.feed(*part, threads)
-            except Refusal as refusal:
-                raise self._error_of(refusal, done) from None
-            done += len(part[0])
-
-    def _idle(self):
-        """Refuse a change while an iterator, which may itself feed this accumulator, is read."""
-        if self._reading:
-            raise RuntimeError(
-                "the accumulator is being fed by an iterator that changes it; nothing was taken in"
-            )
-
-    def _transformed(self, parts):
-        """The stretches after the transform, cut so that memory stays bounded."""
-        for x, low, w in parts:
-            rows = max(1, STRETCH // (self._form.size or 1))
-            for start in range(0, len(x), rows):
-                cut = slice(start, start + rows)
-                pair = x[cut], None if low is None else low[cut]
-                pair = transformed(*pair, self._transform, self._nonfinite)
-                yield (*pair, None if w is None else w[cut])
-
-    def _error_of(self, refusal, done):
-        """What the user is told of a refused reading or weight; ``done`` readings came before."""
-        row = refusal.row + done
-        if refusal.fault is not None:
-            return ValueError(
-                f"{refusal.fault}, got {refusal.value!r} at {row}; nothing was taken in"
-            )
-        position: int | tuple[int, ...] = row
-        if refusal.column is not None:
-            places = np.unravel_index(refusal.column, self._shape)
-            position = (row, *(int(place) for place in places))
-        what = "reading" if self._transform is None else f"{self._transform} of the reading"
-        return NonFiniteError(
-            f"{what} at {position} is {refusal.value!r}; nothing was taken in. "
-            'nonfinite="omit" leaves such readings out and counts them, "propagate" lets them '
-            "through",
-            position,
-        )
-
-    def _flush(self):
-        if self._pending:
-            x = pack_floats(self._pending)
-            self._stream.feed(x, None, None)
-            self._pending = []
-            self._settled = None
-
-    def clear(self) -> Self:
-        """Forget everything that was fed; returns the accumulator itself."""
-        self._idle()
-        self._pending = self._none_pending()
-        self._stream = self._new_stream()
-        self._settled = None
-        return self
 
     # -- combining ---------------------------------------------------------------------------
 
@@ -576,9 +475,7 @@ class Moments(Accumulator, Described):
 
     def _replace(self, rows, tally):
         """Become a settled state of these vectors and counts."""
-        self._pending = self._none_pending()
-        self._stream = self._new_stream()
-        self._settled = None
+        self._begin()
         self._stream.table[..., 0, :] = rows
         self._stream.tally[...] = tally
 

@@ -9,12 +9,12 @@ from ..statistics.readout import checked_degree
 _MOST_AXES, _MOST_CHANNELS = 32, 2**40
 
 
-def checked_order(order):
+def checked_order(order, highest=16):
     if isinstance(order, bool) or not hasattr(order, "__index__"):
-        raise TypeError(f"order must be an integer from 1 to 16, got {order!r}")
+        raise TypeError(f"order must be an integer from 1 to {highest}, got {order!r}")
     order = order.__index__()
-    if not 1 <= order <= 16:
-        raise ValueError(f"order must be an integer from 1 to 16, got {order}")
+    if not 1 <= order <= highest:
+        raise ValueError(f"order must be an integer from 1 to {highest}, got {order}")
     return order
 
 

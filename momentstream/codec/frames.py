@@ -51,6 +51,10 @@ class Writer:
     def integers(self, values):
         self._parts.append(np.array(values, dtype="<i8").tobytes())
 
+    def whole(self, value, size):
+        """An integer in two's complement."""
+        self._parts.append(value.to_bytes(size, "little", signed=True))
+
     def payload(self):
         return b"".join(self._parts)
 
@@ -89,6 +93,10 @@ class Reader:
 
     def integers(self, shape):
         return self._array(shape, "<i8", np.int64)
+
+    def whole(self, size):
+        """An integer in two's complement."""
+        return int.from_bytes(self._take(size), "little", signed=True)
 
     def _array(self, shape, layout, dtype):
         count = 1

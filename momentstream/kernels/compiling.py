@@ -4,6 +4,7 @@ With ``NUMBA_DISABLE_JIT=1`` every kernel is plain Python, and the hint does not
 """
 
 import math
+from contextlib import suppress
 from typing import Any
 
 import numba
@@ -11,6 +12,8 @@ import numpy as np
 from llvmlite import ir
 from numba.core import types
 from numba.extending import intrinsic
+
+from .cache import KernelCache
 
 # Sums may be reordered and fused by the vectoriser; NaN and infinity keep their meaning.
 REORDER = {"reassoc", "contract", "nsz"}
@@ -29,12 +32,11 @@ def compiled(function=None, **options):
     if PLAIN_PYTHON:
         return np.errstate(all="ignore")(function)
     options = _DEFAULTS | options
-    try:
-        return numba.njit(nogil=True, cache=True, **options)(function)
-    except (
-        RuntimeError
-    ):  # Numba found no folder it can write to: a read-only install without a home
-        return numba.njit(nogil=True, **options)(function)
+    kernel = numba.njit(nogil=True, **options)(function)
+    # No folder can be written to: a read-only install without a home.
+    with suppress(RuntimeError):
+        kernel._cache = KernelCache(function)
+    return kernel
 
 
 def internal(function=None, **options):
