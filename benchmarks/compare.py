@@ -18,6 +18,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 from timeit import Timer
 
+import exact_rows
 import numpy as np
 import peers
 import report
@@ -319,6 +320,20 @@ ROWS = (
     Row("first-cached", "first result, kernels cached", 1.2, "s", first_result_cached),
     Row("first-compiled", "first result, kernels not cached", 10.0, "s", first_result_compiled),
     Row("peers", "fastest peer / order 4, four statistics", 4.0, "×", fastest_peer, at_least=True),
+    Row("exact", "exact, orders 1-4, a reading", 8.0, "ns",
+        exact_rows.nanoseconds_a_reading(normal, Result)),
+    Row("exact-decades", "exact, thirty decades, a reading", 16.0, "ns",
+        exact_rows.nanoseconds_a_reading(exact_rows.decades, Result)),
+    Row("exact-counts", "exact, a converter's counts, a reading", None, "ns",
+        exact_rows.nanoseconds_a_reading(exact_rows.counts, Result)),
+    Row("exact-scipy", "SciPy mean, skew, kurtosis / exact", 2.5, "×",
+        exact_rows.against(exact_rows.updating(normal), exact_rows.scipy_statistics(normal),
+                           Result), at_least=True),
+    Row("exact-threads", "exact, one thread / two", 1.7, "×",
+        exact_rows.against(exact_rows.updating(normal, threads=2),
+                           exact_rows.updating(normal), Result), at_least=True),
+    Row("exact-kurtosis", "exact, the first kurtosis()", 200.0, "µs",
+        exact_rows.reading_kurtosis(normal, Result)),
 )  # fmt: skip
 
 

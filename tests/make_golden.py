@@ -34,7 +34,7 @@ GRID = [[[i, i * i % 5, 7 - i], [i % 2, 3 * i, i % 3]] for i in range(5)]
 class Case(NamedTuple):
     """An accumulator, and what it was fed (for channels: a list each) that counts."""
 
-    moments: ms.Moments
+    moments: ms.Moments | ms.ExactMoments
     readings: list
     weights: list | None = None
     omitted: int = 0
@@ -43,6 +43,10 @@ class Case(NamedTuple):
 
 def made(values, beside=None, **configuration):
     return ms.Moments(**configuration).update(values, beside)
+
+
+def exact(values, **configuration):
+    return ms.ExactMoments(**configuration).update(values)
 
 
 def merged():
@@ -88,6 +92,14 @@ CASES = {
     "from_central": Case(
         ms.Moments.from_central(4.0, [12.5, 45.0, 348.5], count=4, minimum=1.0, maximum=10.0), D
     ),
+    "exact": Case(exact(D), D),
+    "exact_empty": Case(exact([]), []),
+    "exact_order_1": Case(exact(X, order=1), X),
+    "exact_wide_integers": Case(exact(WIDE), WIDE),
+    "exact_spread": Case(exact(LARGE + SMALL), LARGE + SMALL),
+    "exact_removed": Case(exact(D + X).remove(exact(X)), D, extremes_known=False),
+    "exact_omit": Case(exact([1.0, NAN, 2.0, INF, 3.0, 10.0], nonfinite="omit"), D, omitted=2),
+    "exact_propagate": Case(exact([1.0, INF, 2.0], nonfinite="propagate"), [1.0, INF, 2.0]),
 }
 
 

@@ -1,12 +1,14 @@
 """What is imported when, which room may import which, and what happens without a cache folder."""
 
 import ast
+import importlib
 import importlib.metadata
 import os
 import re
 import shutil
 import subprocess
 import sys
+from collections import Counter
 from pathlib import Path
 
 import pytest
@@ -363,3 +365,17 @@ def test_compiled_kernels_are_never_taken_for_one_another(tmp_path):
     assert other.load("f(a)") == b"newer code"
     one.flush()
     assert not list(tmp_path.iterdir())
+
+
+def test_no_two_kernels_share_a_name():
+    # Machine code is called by its name: of two that share one, a cached caller may get the other.
+    from numba.core.dispatcher import Dispatcher
+
+    kernels = {}
+    for path in sorted((PACKAGE / "kernels").glob("*.py")):
+        for value in vars(importlib.import_module(f"momentstream.kernels.{path.stem}")).values():
+            if isinstance(value, Dispatcher):
+                kernels[id(value)] = value.py_func
+    names = Counter((function.__module__, function.__qualname__) for function in kernels.values())
+    assert len(names) > 50
+    assert [name for name, count in names.items() if count > 1] == []

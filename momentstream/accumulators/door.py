@@ -139,11 +139,12 @@ def _is_array(values):
 class Weights:
     """The weights of ``n`` readings, made doubles a stretch at a time where they are not."""
 
-    __slots__ = ("_array", "_single")
+    __slots__ = ("_array", "_single", "whole")
 
     def __init__(self, weights, n, whole):
         self._single = None  # one number for all, repeated over a stretch
         self._array = None
+        self.whole = True  # whether any number of them is at hand at once
         if weights is None:
             return
         if isinstance(weights, (str, bytes, bytearray, dict, set, frozenset)):
@@ -154,26 +155,25 @@ class Weights:
             self._array = _exact_enough(*pack_numbers(list(weights), "weights"), whole)
         elif np.ndim(weights) == 0 and not _is_array(weights):
             one = _exact_enough(*pack_numbers([weights], "weights"), whole)[0]
-            self._single = np.full(min(n, STRETCH), one)
+            self._single, self.whole = np.full(min(n, STRETCH), one), False
             return
         else:
             data = _weight_column(weights, whole)
             if data.ndim == 0:
-                self._single = np.full(min(n, STRETCH), float(data))
+                self._single, self.whole = np.full(min(n, STRETCH), float(data)), False
                 return
             flags = data.flags
-            as_it_is = data.dtype == np.float64 and flags.c_contiguous and flags.aligned
-            data = data.reshape(-1)
-            self._array = writable(data) if as_it_is and data.dtype.isnative else data
+            self.whole = bool(
+                data.dtype == np.float64
+                and data.dtype.isnative
+                and flags.c_contiguous
+                and flags.aligned
+            )
+            self._array = data.reshape(-1)
         if len(self._array) != n:
             raise ValueError(
                 f"weights must have one entry a reading: {n} readings, {len(self._array)} weights"
             )
-
-    @property
-    def whole(self):
-        """Whether any number of them is at hand at once."""
-        return self._single is None and (self._array is None or self._array.dtype == np.float64)
 
     def part(self, start, stop):
         """The weights from ``start`` to ``stop``, at most a stretch of them unless ``whole``."""

@@ -106,6 +106,7 @@ class ExactMoments(Fed, Described, ExactStatistics):
         "_stream",
     )  # fmt: skip
 
+    _highest_order = _HIGHEST
     _shape = ()
     _names = None
     _weights = None
@@ -119,6 +120,10 @@ class ExactMoments(Fed, Described, ExactStatistics):
 
     def _new_stream(self):
         return ExactStream(self._order, self._nonfinite)
+
+    def _none_pending(self):
+        # Nothing may wait where the next readings may be too many.
+        return [] if self._stream.count < MOST_COUNTED - 2 * FLUSH else None
 
     # -- feeding -----------------------------------------------------------------------------
 
@@ -190,19 +195,23 @@ class ExactMoments(Fed, Described, ExactStatistics):
         2.0
         """
         self._gate(other, "merge")
+        if other is self:
+            other = self.copy()
         part = other._stream
-        waiting = len(other._pending or ())
-        if self.count + part.count + waiting >= MOST_COUNTED:
-            raise MergeError("the count would pass 2**63 - 1 readings; nothing was changed")
+        waiting = list(other._pending or ())
+        if self.count + part.count + len(waiting) >= MOST_COUNTED:
+            raise MergeError("the count would reach 2**63 - 1 readings; nothing was changed")
         if self.omitted + part.omitted >= MOST_COUNTED:
-            raise MergeError("omitted would pass 2**63 - 1 readings; nothing was changed")
-        if waiting:
-            # Exactness makes it the same whether they wait here or there.
-            self._pending += other._pending
+            raise MergeError("omitted would reach 2**63 - 1 readings; nothing was changed")
+        # The order of readings does not matter: what waits there may wait here.
+        if waiting and self._pending is not None:
+            self._pending += waiting
             if len(self._pending) >= FLUSH:
                 self._flush()
         if part.count or part.omitted:
             self._stream.take_in(part)
+            if self._none_pending() is None:
+                self._flush()
         self._settled = None
         return self
 
@@ -327,9 +336,9 @@ class ExactMoments(Fed, Described, ExactStatistics):
         if found is None:
             return result | dict.fromkeys(names)
         unit = Fraction(2) ** found.exponent
-        result["mean"] = unit * Fraction(found.sums[0], found.count)
+        result["mean"] = unit * Fraction(found.sums[0], found.readings)
         for k, d in enumerate(found.deviations[1:], start=2):
-            result[f"central_{k}"] = unit**k * Fraction(d, found.count**k)
+            result[f"central_{k}"] = unit**k * Fraction(d, found.readings**k)
         return result
 
     # -- state -------------------------------------------------------------------------------
@@ -422,10 +431,8 @@ class ExactMoments(Fed, Described, ExactStatistics):
         if max(counts.values()) >= MOST_COUNTED or finite < 0:
             raise StateError("state holds counts that cannot be")
         fault = impossible(finite, content)
-        if fault is None and known and (np.isfinite(extremes[0]) != (finite > 0)):
-            fault = "extremes without readings, or readings without extremes"
-        if fault is None and finite and not extremes[0] <= extremes[1] and known:
-            fault = "a least reading above the greatest"
+        if fault is None and not _possible_extremes(extremes, known, finite, counts["count"]):
+            fault = f"extremes that {finite} finite readings cannot have"
         if fault is not None:
             raise StateError(f"state is of no readings: {fault}")
         self = cls(order, nonfinite=POLICIES[policy])
@@ -436,3 +443,12 @@ class ExactMoments(Fed, Described, ExactStatistics):
         for name, value in counts.items():
             setattr(stream, name, value)
         return self
+
+
+def _possible_extremes(extremes, known, finite, count):
+    if not known:
+        return count > 0
+    least, most = extremes.tolist()
+    if finite == 0:
+        return (least, most) == (np.inf, -np.inf)
+    return -np.inf < least <= most < np.inf

@@ -7,6 +7,7 @@ readings are M * 2**e.
 
 import numpy as np
 
+from ..algebra.integers import deviations
 from .lazy import exact as _exact
 from .stream import Refusal
 
@@ -82,7 +83,7 @@ class ExactStream:
             A reading is refused; its place counts from the start of the stretch.
         """
         if self.count + len(x) >= MOST_COUNTED:
-            raise ValueError("the count would pass 2**63 - 1; nothing was taken in")
+            raise ValueError("the count would reach 2**63 - 1; nothing was taken in")
         if threads > 1 and len(x) >= threads * _PART:
             parts = self._fed_by_threads(x, low, threads)
         else:
@@ -119,6 +120,10 @@ class ExactStream:
     def _feed(self, x, low):
         """Take readings in; a refusal leaves the state undefined."""
         self.reserve(0)
+        self._add_all(x, low)
+        self.extremes += 0.0  # zeros have no sign
+
+    def _add_all(self, x, low):
         for start in range(0, len(x), _PART):
             part = np.ascontiguousarray(x[start : start + _PART], dtype=np.float64)
             rest = None if low is None else low[start : start + _PART]
@@ -231,31 +236,45 @@ def _signed(value, k):
 def impossible(count, content):
     """Why no ``count`` finite readings have this content, in words; None where some may.
 
-    Not every content that no readings have is recognised.
+    Not every content that no readings have is recognised; but statistics of what passes are those
+    of some law.
     """
     fewest = 0
     for exponent, sums in content.items():
-        even = sums[1::2]
-        if any(value < 0 for value in even):
-            return f"a negative sum of squares at exponent {exponent}"
-        if len(sums) >= 2:
-            first, second, *higher = sums
-            largest = 2**64 - 1 if exponent == 0 else 2**53 - 1
-            fewest += -(-second // largest**2)
-            if (first - second) % 2:
-                return f"sums of odd and even powers that differ by parity at exponent {exponent}"
-            if first**2 > count * second:
-                return f"a sum too large for its squares at exponent {exponent}"
-            if higher and (higher[0] - first) % 6:
-                return f"sums of first and third powers that do not fit at exponent {exponent}"
-            if len(higher) > 1:
-                third, fourth = higher
-                if third**2 > second * fourth or second**2 > count * fourth:
-                    return f"powers that do not fit each other at exponent {exponent}"
-                if (fourth - second) % 12:
-                    return f"sums of second and fourth powers that do not fit at {exponent}"
-        else:
-            fewest += -(-abs(sums[0]) // (2**64 - 1 if exponent == 0 else 2**53 - 1))
+        fault = _impossible_sums(count, sums)
+        if fault is not None:
+            return f"{fault} at exponent {exponent}"
+        largest = 2**64 - 1 if exponent == 0 else 2**53 - 1
+        fewest += -(-abs(sums[0]) // largest) if len(sums) < 2 else -(-sums[1] // largest**2)
     if fewest > count:
-        return f"more than {count} readings make up these sums"
+        return f"sums that more than {count} readings make up"
+    if count and content:
+        order = len(next(iter(content.values())))
+        _, *d = deviations(count, Settled(content, order).sums)
+        second, third, fourth = (*d, 0, 0, 0)[:3]
+        if second < 0 or (second == 0 and (third or fourth)):
+            return "a negative variance"
+        if order == 4 and second * fourth < third**2 + second**3:
+            return "a kurtosis below that of any law"
+    return None
+
+
+def _impossible_sums(count, sums):
+    """The same for the sums of powers of integers."""
+    if len(sums) < 2:
+        return None
+    first, second, third, fourth = (*sums, 0, 0)[:4]
+    if second <= 0:
+        return "no sum of squares"
+    if (first - second) % 2:
+        return "sums of first and second powers of unequal parity"
+    if first**2 > count * second:
+        return "a sum too large for its squares"
+    if len(sums) > 2 and (third - first) % 6:
+        return "sums of first and third powers that do not fit"
+    if len(sums) > 3:
+        if third**2 > second * fourth or not second**2 <= count * fourth:
+            return "a sum of fourth powers too small"
+        if fourth > second**2 or (fourth - second) % 12:
+            return "sums of second and fourth powers that do not fit"
     return None

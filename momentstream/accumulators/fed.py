@@ -44,9 +44,9 @@ class Fed(Accumulator):
     def _begin(self):
         """Be empty."""
         self._reading = False  # whether an iterator is being read
-        self._pending = self._none_pending()
         self._settled = None
         self._stream = self._new_stream()
+        self._pending = self._none_pending()
 
     def _none_pending(self) -> list[float] | None:
         # Where something has to be known of every reading at once, none may wait.
@@ -130,7 +130,7 @@ class Fed(Accumulator):
         if self._pending:
             x = pack_floats(self._pending)
             self._stream.feed(x, None, None)
-            self._pending = []
+            self._pending = self._none_pending()
             self._settled = None
 
     def clear(self) -> Self:

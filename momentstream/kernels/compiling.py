@@ -49,6 +49,20 @@ def internal(function=None, **options):
     )
 
 
+def internal_as(name):
+    """``internal`` for functions made by a function: each by a name of its own.
+
+    Machine code is called by names.  Of two functions made by one ``def`` the name differs only in
+    a number counted in each process: code from the cache could call the other one.
+    """
+
+    def decorate(function):
+        function.__name__ = function.__qualname__ = name
+        return internal(function)
+
+    return decorate
+
+
 @intrinsic
 def _keep_apart(typing_context):
     def generate(context, builder, signature, arguments):

@@ -15,7 +15,7 @@ from llvmlite import ir
 from numba.core import types
 from numba.extending import intrinsic
 
-from .compiling import PLAIN_PYTHON, compiled, internal, keep_apart
+from .compiling import PLAIN_PYTHON, compiled, internal, internal_as, keep_apart
 
 PLACES = 4096
 WORDS = 16  # of a slot: 14 of sums, one unused, and the key
@@ -112,8 +112,8 @@ def _slot_of(place, places, table, used):
     return slot
 
 
-def _make_add_readings(add_powers):
-    @internal
+def _make_add_readings(order, add_powers):
+    @internal_as(f"add_readings_{order}")
     def add_readings(x, begin, places, table, used, extremes):
         keep_apart()
         bits = x.view(np.uint64)
@@ -146,8 +146,8 @@ def _make_add_readings(add_powers):
     return add_readings
 
 
-_add_readings_1, _add_readings_2 = _make_add_readings(_add_1), _make_add_readings(_add_2)
-_add_readings_3, _add_readings_4 = _make_add_readings(_add_3), _make_add_readings(_add_4)
+_add_readings_1, _add_readings_2 = _make_add_readings(1, _add_1), _make_add_readings(2, _add_2)
+_add_readings_3, _add_readings_4 = _make_add_readings(3, _add_3), _make_add_readings(4, _add_4)
 
 
 @compiled

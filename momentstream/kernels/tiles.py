@@ -14,7 +14,7 @@ from llvmlite import ir
 from numba.core import cgutils, types
 from numba.extending import intrinsic
 
-from .compiling import PLAIN_PYTHON, REORDER, internal, keep_apart
+from .compiling import PLAIN_PYTHON, REORDER, internal, internal_as, keep_apart
 from .sums import LEAST, LIGHTEST, MOST, POWERS
 from .vector import two_sum
 
@@ -133,7 +133,7 @@ def _make_add_rows(order):
     """Tiles of eight channels as far as they go, then single channels."""
     wide, single = _make_tile(order, TILE), _make_tile(order, 1)
 
-    @internal
+    @internal_as(f"add_rows_{order}")
     def add_rows(x, w, first, last, pivots, sums):
         keep_apart()
         channel = 0

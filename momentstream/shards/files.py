@@ -6,8 +6,8 @@ import contextlib
 import os
 from typing import Any
 
+from ..accumulators import exact_moments, moments  # noqa: F401  (the reader must know their kinds)
 from ..accumulators.base import Accumulator
-from ..accumulators.moments import Moments  # noqa: F401  (its kind must be known to the reader)
 from ..codec import decode
 
 

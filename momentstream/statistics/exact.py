@@ -9,7 +9,7 @@ import numpy as np
 
 from ..algebra.central import MomentVector
 from ..algebra.integers import deviations, nearest, nearest_root, sums_about
-from .readout import Statistics, View, checked_degree
+from .readout import Statistics, View, checked_ddof, checked_degree
 
 if TYPE_CHECKING:
     from typing import Any
@@ -18,14 +18,14 @@ if TYPE_CHECKING:
 class Integers(NamedTuple):
     """Finite readings ``integer * 2**exponent``: their number and the integers' power sums."""
 
-    count: int
+    readings: int
     exponent: int
     sums: list[int]
 
     @property
     def deviations(self) -> list[int]:
         """D_1 .. D_p (``algebra.integers``)."""
-        return deviations(self.count, self.sums)
+        return deviations(self.readings, self.sums)
 
 
 class ExactStatistics(Statistics):
@@ -50,8 +50,8 @@ class ExactStatistics(Statistics):
         """The arithmetic mean, correctly rounded; nan when empty."""
         found = self._integers()
         if found is None:
-            return super().mean()
-        return nearest(found.sums[0], found.count, found.exponent)
+            return float(super().mean())
+        return nearest(found.sums[0], found.readings, found.exponent)
 
     def variance(self, ddof: float = 0) -> float:
         """The mean squared deviation from the mean, correctly rounded.
@@ -68,7 +68,7 @@ class ExactStatistics(Statistics):
         """
         ratio = self._variance_ratio(ddof, "variance()")
         if ratio is None:
-            return super().variance(ddof)
+            return float(super().variance(ddof))
         above, below, exponent = ratio
         return nearest(above, below, 2 * exponent)
 
@@ -76,17 +76,16 @@ class ExactStatistics(Statistics):
         """The square root of ``variance(ddof)``, correctly rounded on its own."""
         ratio = self._variance_ratio(ddof, "std()")
         if ratio is None:
-            return super().std(ddof)
+            return float(super().std(ddof))
         return nearest_root(*ratio)
 
     def _variance_ratio(self, ddof, name):
+        ddof = checked_ddof(ddof)
         whole = self._whole(2, name)
-        if whole is None or isinstance(ddof, (str, bytes)) or np.ndim(ddof) or not np.isreal(ddof):
-            return None
-        if not np.isfinite(ddof):
+        if whole is None or not np.isfinite(float(ddof)):
             return None
         found, d = whole
-        divisor = found.count * (found.count - Fraction(ddof))
+        divisor = found.readings * (found.readings - Fraction(ddof))
         if divisor <= 0:
             return None
         return d[2] * divisor.denominator, divisor.numerator, found.exponent
@@ -106,9 +105,9 @@ class ExactStatistics(Statistics):
         """
         whole = self._whole(3, "skewness()")
         if whole is None:
-            return super().skewness(bias)
+            return float(super().skewness(bias))
         found, (_, _, d2, d3, *_) = whole
-        n = found.count
+        n = found.readings
         if d2 == 0 or (not bias and n < 3):
             return float("nan")
         above, below = d3 * d3, d2**3
@@ -133,9 +132,9 @@ class ExactStatistics(Statistics):
         """
         whole = self._whole(4, "kurtosis()")
         if whole is None:
-            return super().kurtosis(excess, bias)
+            return float(super().kurtosis(excess, bias))
         found, (_, _, d2, _, d4) = whole
-        n = found.count
+        n = found.readings
         if d2 == 0 or (not bias and n < 4):
             return float("nan")
         above, below = d4 - 3 * d2 * d2, d2 * d2
@@ -155,9 +154,9 @@ class ExactStatistics(Statistics):
         k = checked_degree(k)
         whole = self._whole(k, f"central({k})")
         if whole is None or k < 2:
-            return super().central(k)
+            return float(super().central(k))
         found, d = whole
-        return nearest(d[k], found.count**k, k * found.exponent)
+        return nearest(d[k], found.readings**k, k * found.exponent)
 
     def raw(self, k: int, about: float = 0.0) -> float:
         """The mean of ``(x - about)**k``, correctly rounded; nan when empty.
@@ -170,16 +169,17 @@ class ExactStatistics(Statistics):
         """
         k = checked_degree(k)
         whole = self._whole(max(k, 1), f"raw({k})")
+        about = float(about)
         if whole is None or k == 0 or not np.isfinite(about):
-            return super().raw(k, about)
+            return float(super().raw(k, about))
         found, _ = whole
-        point = Fraction(about if isinstance(about, int) else float(about))
+        point = Fraction(about)
         exponent = min(found.exponent, 1 - point.denominator.bit_length())
         by = found.exponent - exponent
         sums = [value << (j * by) for j, value in enumerate(found.sums[:k], start=1)]
         whole_point = int(point * Fraction(2) ** -exponent)
-        total = sums_about(found.count, sums, whole_point)[k - 1]
-        return nearest(total, found.count, k * exponent)
+        total = sums_about(found.readings, sums, whole_point)[k - 1]
+        return nearest(total, found.readings, k * exponent)
 
     def standardized(self, k: int) -> float:
         """The k-th central moment in units of the standard deviation, correctly rounded.
@@ -189,7 +189,7 @@ class ExactStatistics(Statistics):
         k = checked_degree(k)
         whole = self._whole(max(k, 2), f"standardized({k})")
         if whole is None or k < 3:
-            return super().standardized(k)
+            return float(super().standardized(k))
         _, d = whole
         if d[2] == 0:
             return float("nan")
@@ -202,10 +202,10 @@ class ExactStatistics(Statistics):
         k = checked_degree(k, least=1)
         whole = self._whole(k, f"cumulant({k})")
         if whole is None or k == 1:
-            return super().cumulant(k)
+            return float(super().cumulant(k))
         found, d = whole
         above = d[4] - 3 * d[2] ** 2 if k == 4 else d[k]
-        return nearest(above, found.count**k, k * found.exponent)
+        return nearest(above, found.readings**k, k * found.exponent)
 
     def k_statistic(self, k: int) -> float:
         """Fisher's k-statistic, correctly rounded: the unbiased estimate of the k-th cumulant.
@@ -214,10 +214,10 @@ class ExactStatistics(Statistics):
         """
         k = checked_degree(k, least=1)
         whole = self._whole(k, f"k_statistic({k})") if k <= 4 else None
-        if whole is None or k == 1 or whole[0].count < k:
-            return super().k_statistic(k)
+        if whole is None or k == 1 or whole[0].readings < k:
+            return float(super().k_statistic(k))
         found, d = whole
-        n = found.count
+        n = found.readings
         if k == 2:
             above, below = d[2], n * (n - 1)
         elif k == 3:
@@ -231,14 +231,18 @@ class ExactStatistics(Statistics):
         """The root mean square of the whole signal, correctly rounded; nan when empty."""
         whole = self._whole(2, "rms()")
         if whole is None:
-            return super().rms()
+            return float(super().rms())
         found, _ = whole
-        return nearest_root(found.sums[1], found.count, found.exponent)
+        return nearest_root(found.sums[1], found.readings, found.exponent)
 
 
 def exact_view(found: Integers, order: int, minimum: float, maximum: float) -> View:
     """The integers as a moment vector: what statistics that are not exact, and summaries, read."""
     n, exponent, sums = found
+    if n == 0:
+        nothing = MomentVector(np.float64(0.0), np.float64(0.0), np.float64(0.0), 0.0,
+                               np.zeros(order - 1))  # fmt: skip
+        return View(order, (), None, 0, nothing, minimum, maximum)
     d = [0, *found.deviations]
     mean = nearest(sums[0], n, exponent)
     scale = 0

@@ -43,6 +43,18 @@ def checked_degree(k, least=0, name="k"):
     return degree
 
 
+def checked_ddof(ddof):
+    """``ddof`` as a Python number."""
+    if isinstance(ddof, (int, np.integer, np.bool_)):
+        return int(ddof)
+    try:
+        if isinstance(ddof, (str, bytes)) or np.ndim(ddof):
+            raise TypeError
+        return float(ddof)
+    except TypeError:
+        raise TypeError(f"ddof must be a number, got {ddof!r}") from None
+
+
 def central_moments(view, degree):
     """Central moments of order 0 .. degree in units of ``2**(k * scale)``; nan when empty."""
     weight = np.where(view.vector.weight > 0.0, view.vector.weight, np.nan)
@@ -52,8 +64,7 @@ def central_moments(view, degree):
 
 def _variance_divided(view, ddof):
     """The variance in units of ``2**(2 * scale)``."""
-    if isinstance(ddof, (str, bytes)) or np.ndim(ddof) or not np.isreal(ddof):
-        raise TypeError(f"ddof must be a number, got {ddof!r}")
+    ddof = checked_ddof(ddof)
     v = view.vector
     loss = ddof
     if ddof != 0:
@@ -113,6 +124,7 @@ class Statistics:
     """
 
     __slots__ = ()
+    _highest_order = 16
 
     def _view(self) -> View:
         raise TypeError("a class with statistics must say what they are read from")
@@ -125,7 +137,10 @@ class Statistics:
     def _need(self, order, name):
         view = self._view()
         if view.order < order:
-            cure = f"make it with order={order} or higher" if order <= 16 else "the highest is 16"
+            highest = self._highest_order
+            cure = f"make it with order={order} or higher"
+            if order > highest:
+                cure = f"the highest is {highest}"
             kept = f"{type(self).__name__} keeps order={view.order}"
             raise OrderError(f"{name} needs order={order}, {kept}; {cure}")
         return view
