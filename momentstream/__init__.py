@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from . import kernels as kernels
     from .accumulators.exact_moments import ExactMoments as ExactMoments
+    from .accumulators.joint_moments import JointMoments as JointMoments
     from .accumulators.moments import Moments as Moments
     from .errors import MergeError as MergeError
     from .errors import MomentstreamError as MomentstreamError
@@ -26,6 +27,7 @@ if TYPE_CHECKING:
     from .shards.files import from_bytes as from_bytes
     from .shards.files import load as load
     from .shards.files import save as save
+    from .statistics.joint_summary import JointSummary as JointSummary
     from .statistics.summary import Summary as Summary
 
 __version__ = "0.1.0"
@@ -34,6 +36,8 @@ __version__ = "0.1.0"
 # package costs next to nothing, and the compiler comes with the first numeric work.
 _HOMES = {
     "ExactMoments": ".accumulators.exact_moments",
+    "JointMoments": ".accumulators.joint_moments",
+    "JointSummary": ".statistics.joint_summary",
     "MergeError": ".errors",
     "Moments": ".accumulators.moments",
     "MomentstreamError": ".errors",

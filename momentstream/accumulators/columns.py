@@ -120,10 +120,15 @@ def is_frame(values):
     return hasattr(kind, "columns") and (hasattr(kind, "iloc") or hasattr(kind, "get_columns"))
 
 
+def frame_names(values):
+    """The names of a frame's columns."""
+    own = getattr(values, "column_names", None)
+    return [str(name) for name in (values.columns if own is None else own)]
+
+
 def read_frame(values, names, size):
     """The columns of a frame in the order of ``names`` (its own where None), values and masks."""
-    own = getattr(values, "column_names", None)
-    own = [str(name) for name in (values.columns if own is None else own)]
+    own = frame_names(values)
     if len(set(own)) != len(own):
         raise ValueError(f"the frame has two columns of one name: {own}")
     if names is not None:

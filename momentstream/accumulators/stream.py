@@ -19,7 +19,6 @@ _BLOCK = 8192  # kernels.blocks.BLOCK, known without a compiler
 _LARGEST_BLOCK = 1 << 21  # readings in a block of many channels
 _SMALLEST_BUFFER = 512  # readings
 _FIELDS_WEIGHTED = 4
-_single_agrees: dict[int, bool] = {}
 
 
 def even(order):
@@ -121,7 +120,7 @@ class Stream:
 
     def copy(self):
         other = object.__new__(type(self))
-        for name in self.__slots__:
+        for name in Stream.__slots__:
             value = getattr(self, name)
             setattr(other, name, value.copy() if isinstance(value, np.ndarray) else value)
         return other
@@ -193,7 +192,7 @@ class Stream:
                 x, low, w, self.rows, policy, whole, self.order, table, blocks, tally, extremes
             )
         elif x.dtype == np.float32:
-            after = self._take_single(x, policy, table, blocks, tally, extremes)
+            after = _blocks.take_blocks_32(x, policy, self.order, table, blocks, tally, extremes)
         else:
             after = _blocks.take_blocks(
                 x, low, w, policy, whole, self.order, table, blocks, tally, extremes
@@ -201,19 +200,6 @@ class Stream:
         if after < 0:
             raise Refusal
         return after
-
-    def _take_single(self, x, policy, table, blocks, tally, extremes):
-        if single_precision_agrees(self.order):
-            return _blocks.take_blocks_32(x, policy, self.order, table, blocks, tally, extremes)
-        step = 8 * self.rows
-        for start in range(0, len(x), step):
-            part = x[start : start + step].astype(np.float64)
-            blocks = _blocks.take_blocks(
-                part, None, None, policy, False, self.order, table, blocks, tally, extremes
-            )
-            if blocks < 0:
-                break
-        return blocks
 
     def _take_in_groups(self, x, low, w, table, blocks, tally, extremes, threads):
         """Aligned groups of blocks on threads, each its own small tree, inserted in order."""
@@ -407,14 +393,3 @@ def extend(extremes, more):
         extremes[0] = other_least
     if other_most > most or other_most != other_most:
         extremes[1] = other_most
-
-
-def single_precision_agrees(order):
-    """Whether kernels read single precision directly with the bits of doubles, on this machine."""
-    order = even(order)
-    if order not in _single_agrees:
-        probe = np.cos(np.arange(8192.0)).astype(np.float32)
-        _single_agrees[order] = bool(
-            _blocks.single_sums_agree(probe.astype(np.float64), probe, order)
-        )
-    return _single_agrees[order]

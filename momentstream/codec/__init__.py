@@ -7,8 +7,8 @@ offset   type        meaning
 =======  ==========  ==========================================================================
 0        8 bytes     magic: ``93 6D 73 74 61 74 65 0A`` ("\\x93mstate\\n")
 8        uint16      format version, now 1
-10       uint16      kind: 1 Moments, 2 ExactMoments (``accumulators.moments_payload`` and
-                     ``accumulators.exact_moments`` describe their payloads)
+10       uint16      kind: 1 Moments, 2 ExactMoments, 3 JointMoments (their payloads are described
+                     by ``accumulators.moments_payload``, ``exact_moments``, ``joint_payload``)
 12       uint32      flags; 1: working state, to be continued bit for bit; 0: settled state
 16       uint64      n, the length of the payload
 24       n bytes     payload

@@ -22,7 +22,7 @@ from .reduction import (
     sweep,
     write_vector,
 )
-from .sums import LEAST, MOST, PIVOT, ROOM, STRETCH, power_sums
+from .sums import LEAST, MOST, PIVOT, ROOM, STRETCH, add_readings, begin_sums, fold_sums
 from .vector import (
     MEAN,
     NEW,
@@ -32,7 +32,6 @@ from .vector import (
     insert_block,
     is_finite,
     to_plain_scale,
-    two_sum,
 )
 
 BLOCK = 8192
@@ -176,19 +175,16 @@ def squeeze(x, low, w, kept, kept_low, kept_w):
 
 
 @internal
-def sweep_gapped(x, order, room, row, whole_row):
+def sweep_gapped(x, order, room, row):
     """``sweep`` of the finite readings alone, a stretch of them at a time; returns how many.
 
     The bits are those of ``squeeze`` and ``sweep``, which would pass the block through the second
-    cache level once more.  ``whole_row`` of ``room`` receives the sums.
+    cache level once more.
     """
     keep_apart()
     kept = np.empty(STRETCH + 8)
+    sums, rests, pivots = begin_sums(order, 0.0)
     held = n = i = ZERO
-    pivot = rest = 0.0
-    for k in range(order + 1):
-        room[whole_row, k] = 0.0
-    room[whole_row, LEAST], room[whole_row, MOST] = np.inf, -np.inf
     while i < x.size or held > 0:
         while held < STRETCH and i + 8 <= x.size:
             if copy_eight(x, i, kept, held):
@@ -207,20 +203,16 @@ def sweep_gapped(x, order, room, row, whole_row):
             break
         if n == 0:
             pivot, _ = find_pivot(part, None, ZERO, order, None)
-        power_sums(part, pivot, order, room, row)
-        room[whole_row, 1], left = two_sum(room[whole_row, 1], room[row, 1])
-        rest += left
-        room[whole_row, 0] += room[row, 0]
-        for k in range(2, order + 1):
-            room[whole_row, k] += room[row, k]
-        room[whole_row, LEAST] = min(room[whole_row, LEAST], room[row, LEAST])
-        room[whole_row, MOST] = max(room[whole_row, MOST], room[row, MOST])
+            for j in range(pivots.size):
+                pivots[j] = pivot
+        add_readings(part, order, pivots, sums, rests)
         n += part.size
         for j in range(part.size, held):
             kept[j - part.size] = kept[j]
         held -= part.size
-    room[whole_row, 1] += rest
-    room[whole_row, PIVOT] = pivot
+    fold_sums(sums, rests, order, room, row)
+    room[row, 0] = n
+    room[row, PIVOT] = pivots[0]
     return n
 
 
@@ -257,13 +249,12 @@ def _take_gapped(x, low, w, policy, whole, order, table, tally, extremes, room, 
     if w is not None and not check_weights(w, whole, tally):
         return False
     if w is None and low is None and by_rows is None and policy == OMIT:
-        found = np.empty((2, ROOM))
-        n = sweep_gapped(x, order, found, ZERO, ZERO + 1)
-        if n > 0 and settled_by_sweep(None, order, found, ZERO + 1):
-            write_vector(None, order, table, found, ZERO + 1, 0.0, ZERO, ZERO)
+        n = sweep_gapped(x, order, room, row)
+        if n > 0 and settled_by_sweep(None, order, room, row):
+            write_vector(None, order, table, room, row, 0.0, ZERO, ZERO)
             add_count(tally, COUNT, n)
             add_count(tally, OMITTED, x.size - n)
-            extend(extremes, found[1, LEAST], found[1, MOST])
+            extend(extremes, room[row, LEAST], room[row, MOST])
             return True
     kept = np.empty(x.size)
     kept_low = room_for(low, x.size)
@@ -445,20 +436,3 @@ def take_blocks_32(x, policy, order, table, blocks, tally, extremes):
                     return -1
             blocks = insert_block(table, blocks, ZERO, order, NO)
     return blocks
-
-
-@compiled
-def single_sums_agree(x, narrow, order):
-    """Whether sums read from single precision have the bits of those read from doubles.
-
-    The same code over another type: a compiler is free to order the additions otherwise, and then
-    single precision must be widened first.
-    """
-    room = np.zeros((2, ROOM))
-    for n in (x.size, x.size - 13, 70, 5):
-        sweep(x[:n], None, order, room, ZERO, None)
-        sweep(narrow[:n], None, order, room, ZERO + 1, None)
-        for k in range(ROOM):
-            if room[0, k] != room[1, k]:
-                return False
-    return True

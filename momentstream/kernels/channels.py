@@ -21,8 +21,7 @@ from .blocks import (
 )
 from .compiling import compiled, internal
 from .reduction import HEAD_ROWS, ZERO, part_of, settled_by_sweep, write_vector
-from .sums import LEAST, MOST, PIVOT, ROOM
-from .tiles import copy_sums, row_sums, weight_sums
+from .sums import LEAST, MOST, PIVOT, ROOM, copy_sums, new_channel_sums, row_sums, weight_sums
 from .vector import NEW, clear_row, combine_pair, fold_levels, insert_block
 
 _BY_ROWS = np.bool_(True)
@@ -55,7 +54,7 @@ def _find_pivots(x, pivots):
 
 @internal
 def _take_rows(
-    x, low, w, policy, whole, order, tables, blocks, tally, extremes, room, pivots, sums, part
+    x, low, w, policy, whole, order, tables, blocks, tally, extremes, room, pivots, sums, rests
 ):
     """Row NEW of every channel's table becomes the channel's vector of one block of rows.
 
@@ -70,7 +69,7 @@ def _take_rows(
         weight_sums(w, room, _FIRST)
     if low is None:
         _find_pivots(x, pivots)
-        row_sums(x, w, pivots, sums, part)
+        row_sums(x, w, pivots, sums, rests)
     for channel in range(channels):
         table = tables[channel]
         settled = False
@@ -111,9 +110,9 @@ def take_row_block(x, low, w, policy, whole, order, tables, tally, extremes):
         for channel in range(channels):
             clear_row(tables[channel], NEW)
         return True
-    room, pivots, sums, part = _rooms(channels, order)
+    room, pivots, sums, rests = _rooms(channels, order)
     blocks = _take_rows(
-        x, low, w, policy, whole, order, tables, ZERO, tally, extremes, room, pivots, sums, part
+        x, low, w, policy, whole, order, tables, ZERO, tally, extremes, room, pivots, sums, rests
     )
     return blocks == 0
 
@@ -122,7 +121,7 @@ def take_row_block(x, low, w, policy, whole, order, tables, tally, extremes):
 def take_row_blocks(x, low, w, block_rows, policy, whole, order, tables, blocks, tally, extremes):
     """Take whole blocks of rows in; returns the block count, -1 if something was refused."""
     channels = x.shape[1]
-    room, pivots, sums, part = _rooms(channels, order)
+    room, pivots, sums, rests = _rooms(channels, order)
     for start in range(0, x.shape[0], block_rows):
         stop = start + block_rows
         taken = _take_rows(
@@ -139,7 +138,7 @@ def take_row_blocks(x, low, w, block_rows, policy, whole, order, tables, blocks,
             room,
             pivots,
             sums,
-            part,
+            rests,
         )
         if taken < 0:
             for channel in range(channels):
@@ -176,12 +175,5 @@ def combine_channel_pairs(a, b, order, weighted):
 
 @internal
 def _rooms(channels, order):
-    size = 2
-    while size < order:
-        size *= 2
-    return (
-        np.empty((2, ROOM)),
-        np.empty(channels),
-        np.empty((size + 2, channels)),
-        np.empty((size + 2, channels)),
-    )
+    sums, rests = new_channel_sums(order, channels)
+    return np.empty((2, ROOM)), np.empty(channels), sums, rests

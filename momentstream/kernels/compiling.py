@@ -93,25 +93,9 @@ def _copy_eight(typing_context, source, place, target, to):
     return types.boolean(source, types.intp, target, types.intp), generate
 
 
-def _selection(comparison):
-    @intrinsic
-    def select(typing_context, a, b):
-        def generate(context, builder, signature, arguments):
-            flags = ("nnan", "nsz")
-            first = builder.fcmp_ordered(comparison, *arguments, flags=flags)
-            return builder.select(first, *arguments, flags=flags)
-
-        return types.float64(types.float64, types.float64), generate
-
-    return select
-
-
 keep_apart: Any
 copy_eight: Any
-lesser: Any
-extended: Any
 ldexp: Any
-greater: Any
 
 if PLAIN_PYTHON:
 
@@ -128,20 +112,11 @@ if PLAIN_PYTHON:
         target[to : to + 8] = eight
         return all(value - value == 0.0 for value in eight.tolist())
 
-    # One sum at a time where compiled code has dozens side by side: wider, to be as accurate.
-    extended = np.longdouble
-    keep_apart, copy_eight, lesser, greater = _nothing, _copy_eight_plainly, min, max
+    keep_apart, copy_eight = _nothing, _copy_eight_plainly
 else:
     ldexp = math.ldexp
 
-    @numba.njit
-    def extended(value):
-        """The value as it is."""
-        return value
-
     copy_eight = _copy_eight
-    # Extremes that vectorise: they say nothing where a NaN takes part (the sums show that one).
-    lesser, greater = _selection("<"), _selection(">")
     # The power sums must be the same machine code wherever they are called from: inlined copies
     # could be vectorised in another order, and equal readings would give unequal bits.
     keep_apart = _keep_apart

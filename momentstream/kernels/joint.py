@@ -23,7 +23,8 @@ import math
 
 import numpy as np
 
-from .compiling import REORDER, compiled, internal, keep_apart, ldexp
+from .compiling import compiled, internal, keep_apart, ldexp
+from .products import CHUNK, four, one
 from .vector import BASE, LEVELS, NEW, exponent, is_finite, two_sum
 
 ROWS = 256  # rows that are transposed at a time
@@ -69,40 +70,19 @@ def first_sum(dim, k):
     return place
 
 
-@internal(fastmath=REORDER)
-def _tail_products(a, i, b, start, stop, n, out, place):
+@internal
+def _tail_products(a, i, b, start, stop, chunks, out, place):
     """Add to ``out``, from ``place`` on, the dot products of run i of a with runs of b."""
     k = start
     while k + 4 <= stop:
-        s0 = s1 = s2 = s3 = 0.0
-        for r in range(n):
-            value = a[i, r]
-            s0 += value * b[k, r]
-            s1 += value * b[k + 1, r]
-            s2 += value * b[k + 2, r]
-            s3 += value * b[k + 3, r]
-        out[place] += s0
-        out[place + 1] += s1
-        out[place + 2] += s2
-        out[place + 3] += s3
+        four(a, i, b, k, chunks, out, place)
         place += 4
         k += 4
     while k < stop:
-        s0 = 0.0
-        for r in range(n):
-            s0 += a[i, r] * b[k, r]
-        out[place] += s0
+        one(a, i, b, k, chunks, out, place)
         place += 1
         k += 1
     return place
-
-
-@internal(fastmath=REORDER)
-def _sum_of(a, i, n):
-    total = 0.0
-    for r in range(n):
-        total += a[i, r]
-    return total
 
 
 @internal
@@ -118,6 +98,8 @@ def _center(x, first, n, pivot, columns, extremes):
             least = value if value < least else least
             most = value if value > most else most
             columns[j, r] = value - pivot[j]
+        for r in range(n, (n + CHUNK - 1) // CHUNK * CHUNK):
+            columns[j, r] = 0.0
         if least < extremes[j, 0]:
             extremes[j, 0] = least
         if most > extremes[j, 1]:
@@ -129,13 +111,16 @@ def _add_products(columns, lifted, pairs, lifted_pairs, n, order, sums, firsts):
     """All sums of products over one transposed part of a block.
 
     ``lifted`` and ``lifted_pairs`` are multiplied by the weights (without: the same arrays).
+    Behind the n rows the runs are zero to the end of a chunk.
     """
     keep_apart()
-    dim = columns.shape[0]
+    dim = columns.shape[0] - 1  # the last run is of ones
+    chunks = (n + CHUNK - 1) // CHUNK
+    n = chunks * CHUNK
     place = 0
     for i in range(dim):
-        firsts[i] += _sum_of(lifted, i, n)
-        place = _tail_products(lifted, i, columns, i, dim, n, sums, place)
+        one(lifted, i, columns, dim, chunks, firsts, i)
+        place = _tail_products(lifted, i, columns, i, dim, chunks, sums, place)
     if order == 2:
         return
     pair = 0
@@ -154,7 +139,7 @@ def _add_products(columns, lifted, pairs, lifted_pairs, n, order, sums, firsts):
     pair = 0
     for i in range(dim):
         for j in range(i, dim):
-            place = _tail_products(lifted_pairs, pair, columns, j, dim, n, sums, place)
+            place = _tail_products(lifted_pairs, pair, columns, j, dim, chunks, sums, place)
             pair += 1
     if order == 3:
         return
@@ -163,13 +148,13 @@ def _add_products(columns, lifted, pairs, lifted_pairs, n, order, sums, firsts):
     for i in range(dim):
         for j in range(i, dim):
             start = pair_place(dim, j, j)
-            place = _tail_products(lifted_pairs, pair, pairs, start, count, n, sums, place)
+            place = _tail_products(lifted_pairs, pair, pairs, start, count, chunks, sums, place)
             pair += 1
 
 
 @internal
 def add_moved(sums, first, weight, firsts_too, offset, order, target, at):
-    """Add to ``target``, from ``at`` on, sums about a centre that lies ``offset`` below the present.
+    """Add sums to ``target``, from ``at`` on, about a centre ``offset`` below the present one.
 
     ``firsts_too``: the sums of first order are not zero but what makes the new centre the mean,
     ``weight * -offset``.
@@ -231,9 +216,7 @@ def add_moved(sums, first, weight, firsts_too, offset, order, target, at):
                         + c * sums[third + triple_place(dim, i, j, m)]
                         + d * ijk
                     )
-                    seconds = (
-                        a * b * km + a * c * jm + b * c * im + (a * jk + b * ik + c * ij) * d
-                    )
+                    seconds = a * b * km + a * c * jm + b * c * im + (a * jk + b * ik + c * ij) * d
                     target[place] += (
                         sums[fourth_place] + thirds + seconds + factor * pairs_with_d * d
                     )
@@ -275,6 +258,8 @@ def _sweep(x, w, order, pivot, work, sums, firsts, extremes):
             for j in range(firsts.size):
                 for r in range(n):
                     lifted[j, r] = columns[j, r] * w[first + r]
+                for r in range(n, (n + CHUNK - 1) // CHUNK * CHUNK):
+                    lifted[j, r] = 0.0
             _add_products(columns, lifted, pairs, lifted_pairs, n, order, part_sums, part_firsts)
         for i in range(sums.size):
             sums[i] += part_sums[i]
@@ -286,8 +271,11 @@ def _sweep(x, w, order, pivot, work, sums, firsts, extremes):
 
 
 @internal
-def _reduce(x, w, weight, order, pivot, work, sums, firsts, extremes, row):
-    """``row`` becomes the vector of a block of rows; False where a sum is out of range."""
+def _reduce(x, w, weight, order, pivot, work, sums, firsts, extremes, row, strict):
+    """``row`` becomes the vector of a block of rows.
+
+    ``strict``: only where all sums are well within the range of doubles; else False.
+    """
     keep_apart()
     dim = pivot.size
     _find_pivot(x, pivot)
@@ -297,7 +285,7 @@ def _reduce(x, w, weight, order, pivot, work, sums, firsts, extremes, row):
         for j in range(dim):
             second = sums[pair_place(dim, j, j)]
             constant = extremes[j, 0] == extremes[j, 1]
-            if not (2.0**-400 < second < 2.0**400) and not constant:
+            if strict and not (2.0**-400 < second < 2.0**400) and not constant:
                 return False
             if not is_finite(extremes[j, 0]) or not is_finite(extremes[j, 1]):
                 return False
@@ -325,7 +313,9 @@ def _reduce(x, w, weight, order, pivot, work, sums, firsts, extremes, row):
 @internal
 def _new_work(dim, order, weighted):
     pairs = sums_of_order(dim, 2) if order > 2 else 1
-    columns = np.empty((dim, ROWS))
+    columns = np.empty((dim + 1, ROWS))
+    for r in range(ROWS):
+        columns[dim, r] = 1.0
     products = np.empty((pairs, ROWS))
     if not weighted:
         return columns, columns, products, products
@@ -350,7 +340,7 @@ def _write_weights(w, row):
 
 
 @compiled
-def reduce_rows(x, w, order, row, extremes):
+def reduce_rows(x, w, order, row, extremes, strict):
     """``row`` becomes the vector of rows; False where they need care (range, not finite)."""
     dim = x.shape[1]
     work = _new_work(dim, order, w is not None)
@@ -360,7 +350,9 @@ def reduce_rows(x, w, order, row, extremes):
         _write_weights(w, row)
         weight = row[0]
     own = row[: 1 + 3 * dim + sums.size]
-    return _reduce(x, w, weight, order, np.empty(dim), work, sums, np.empty(dim), extremes, own)
+    return _reduce(
+        x, w, weight, order, np.empty(dim), work, sums, np.empty(dim), extremes, own, strict
+    )
 
 
 @compiled
@@ -376,11 +368,11 @@ def take_joint_blocks(x, w, start, rows, order, table, blocks, extremes):
     size = 1 + 3 * dim + sums.size
     while start < x.shape[0]:
         stop = start + rows
-        row = table[NEW]
+        row, part_row = table[NEW], table[NEW, :size]
         weight = np.float64(rows)
         if w is None:
             good = _reduce(
-                x[start:stop], None, weight, order, pivot, work, sums, firsts, own, row[:size]
+                x[start:stop], None, weight, order, pivot, work, sums, firsts, own, part_row, True
             )
         else:
             part = w[start:stop]
@@ -390,8 +382,18 @@ def take_joint_blocks(x, w, start, rows, order, table, blocks, extremes):
                     good = False
             if good:
                 _write_weights(part, row)
-                good = 2.0**-100 < row[0] and _reduce(
-                    x[start:stop], part, row[0], order, pivot, work, sums, firsts, own, row[:size]
+                good = row[0] > 2.0**-100 and _reduce(
+                    x[start:stop],
+                    part,
+                    row[0],
+                    order,
+                    pivot,
+                    work,
+                    sums,
+                    firsts,
+                    own,
+                    row[:size],
+                    True,
                 )
         if not good:
             break

@@ -14,8 +14,15 @@ from numba.core import types
 from numba.extending import overload
 
 from .compiling import REORDER, internal, keep_apart, ldexp
-from .sums import LEAST, LIGHTEST, MOST, PIVOT, POWERS, power_sums, weighted_power_sums
-from .tiles import column_sums
+from .sums import (
+    LEAST,
+    LIGHTEST,
+    MOST,
+    PIVOT,
+    POWERS,
+    column_sums,
+    power_sums,
+)
 from .vector import (
     LARGEST,
     LARGEST_WEIGHT,
@@ -150,26 +157,15 @@ def _head_distance(x, origin, by_rows):
     return lambda x, origin, by_rows: _mean_distance_by_rows(x, origin)
 
 
-@internal
-def add_up_weighted_or_not(x, w, pivot, order, room, row):
-    if w is None:
-        power_sums(x, pivot, order, room, row)
-    else:
-        weighted_power_sums(x, w, pivot, order, room, row)
-
-
 def add_up(x, w, pivot, order, room, row, by_rows):
     """Power sums into ``room[row]``: of a stream, or of one channel in the channels' order."""
-    if by_rows is None:
-        add_up_weighted_or_not(x, w, pivot, order, room, row)
-    else:
-        column_sums(x, w, pivot, order, room, row)
+    (power_sums if by_rows is None else column_sums)(x, w, pivot, order, room, row)
 
 
 @overload(add_up)
 def _add_up(x, w, pivot, order, room, row, by_rows):
     if isinstance(by_rows, types.NoneType):
-        return lambda x, w, pivot, order, room, row, by_rows: add_up_weighted_or_not(
+        return lambda x, w, pivot, order, room, row, by_rows: power_sums(
             x, w, pivot, order, room, row
         )
     return lambda x, w, pivot, order, room, row, by_rows: column_sums(x, w, pivot, order, room, row)

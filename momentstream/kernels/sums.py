@@ -1,6 +1,7 @@
 """Power sums of one block about a pivot, in stretches: the only loops that add readings up.
 
-Everything found goes into row ``row`` of the float64 table ``room``:
+A stream's readings are dealt out to 8, 16 or 32 lanes, a channel's stay in one; ``tiles`` adds them
+up, a stretch at a time.  Everything found goes into row ``row`` of the float64 table ``room``:
 
 ==================  ===========================================================================
 ``room[row, k]``    the sum of ``(x - pivot)**k``, k = 1 .. order (even); k = 0: the weight
@@ -10,289 +11,263 @@ Everything found goes into row ``row`` of the float64 table ``room``:
 ``PIVOT``           free for the caller, who may keep the pivot there
 ==================  ===========================================================================
 
-The sum of first order, which the mean rests on, is carried from stretch to stretch with what each
-addition leaves: readings far out on both sides would cost it digits.
-
-The extremes are found in the same sweep, which keeps arithmetic and memory busy at once: two
-sweeps took 1.6 times as long.  A NaN or an infinity among the readings shows in the even sums.
+The extremes are found in the same sweep, which keeps arithmetic and memory busy at once.  A NaN or
+an infinity among the readings shows in the even sums.  The order of all additions is written out:
+what a compiler may reorder it orders one way where it compiles, and another way where it finds the
+code on disk.
 """
 
 import numpy as np
 
-from .compiling import REORDER, extended, greater, internal, keep_apart, lesser
-from .vector import two_sum
+from .compiling import REORDER, internal, internal_as, keep_apart
+from .tiles import BESIDE, BY_ROW, make_begin, make_fold, make_tile
 
 POWERS, PIVOT, LEAST, MOST, LIGHTEST = 17, 22, 23, 24, 25
 ROOM = 26
-_FIRST_UPPER, _SECOND_UPPER = np.int64(4), np.int64(10)
-STRETCH = 512  # readings added up in one sweep: 4096 at once lost 70 to 96 units on two-point data
+STRETCH_ROWS = 32  # readings of a lane that are added up before they go to the totals
+_WIDTH = 8
+_FOURTH, _ONLY = np.int64(4), np.int64(0)
 
 
-@internal(fastmath=REORDER)
-def _sums_2(x, pivot, room, row):
-    keep_apart()
-    t1 = t2 = 0.0
-    rest = 0.0
-    lowest, highest = np.inf, -np.inf
-    for start in range(0, x.size, STRETCH):
-        part = x[start : min(start + STRETCH, x.size)]
-        s1 = s2 = 0.0
-        least, most = np.inf, -np.inf
-        for i in range(part.size):
-            value = part[i]
-            d = extended(value - pivot)
-            least = lesser(value, least)
-            most = greater(value, most)
-            s1 += d
-            s2 += d * d
-        lowest = lesser(least, lowest)
-        highest = greater(most, highest)
-        t1, left = two_sum(t1, float(s1))
-        rest += left
-        t2 += float(s2)
-    room[row, 1] = t1 + rest
-    room[row, 2] = t2
-    room[row, LEAST] = lowest
-    room[row, MOST] = highest
+def lanes_for(order, weighted):
+    """As many lanes as leave the sums in registers."""
+    if order > 8:
+        return 8
+    return 16 if weighted or order > 4 else 32
 
 
-@internal(fastmath=REORDER)
-def _sums_4(x, pivot, room, row):
-    keep_apart()
-    t1 = t2 = t3 = t4 = 0.0
-    rest = 0.0
-    lowest, highest = np.inf, -np.inf
-    for start in range(0, x.size, STRETCH):
-        part = x[start : min(start + STRETCH, x.size)]
-        s1 = s2 = s3 = s4 = 0.0
-        least, most = np.inf, -np.inf
-        for i in range(part.size):
-            value = part[i]
-            d = extended(value - pivot)
-            least = lesser(value, least)
-            most = greater(value, most)
-            d2 = d * d
-            s1 += d
-            s2 += d2
-            s3 += d2 * d
-            s4 += d2 * d2
-        lowest = lesser(least, lowest)
-        highest = greater(most, highest)
-        t1, left = two_sum(t1, float(s1))
-        rest += left
-        t2 += float(s2)
-        t3 += float(s3)
-        t4 += float(s4)
-    room[row, 1] = t1 + rest
-    room[row, 2] = t2
-    room[row, 3] = t3
-    room[row, 4] = t4
-    room[row, LEAST] = lowest
-    room[row, MOST] = highest
+STRETCH = STRETCH_ROWS * lanes_for(2, False)  # the longest
 
 
-@internal(fastmath=REORDER)
-def _sums_8(x, pivot, room, row):
-    keep_apart()
-    t1 = t2 = t3 = t4 = t5 = t6 = t7 = t8 = 0.0
-    rest = 0.0
-    lowest, highest = np.inf, -np.inf
-    for start in range(0, x.size, STRETCH):
-        part = x[start : min(start + STRETCH, x.size)]
-        s1 = s2 = s3 = s4 = s5 = s6 = s7 = s8 = 0.0
-        least, most = np.inf, -np.inf
-        for i in range(part.size):
-            value = part[i]
-            d = extended(value - pivot)
-            least = lesser(value, least)
-            most = greater(value, most)
-            d2 = d * d
-            d3 = d2 * d
-            d4 = d2 * d2
-            s1 += d
-            s2 += d2
-            s3 += d3
-            s4 += d4
-            s5 += d4 * d
-            s6 += d4 * d2
-            s7 += d4 * d3
-            s8 += d4 * d4
-        lowest = lesser(least, lowest)
-        highest = greater(most, highest)
-        t1, left = two_sum(t1, float(s1))
-        rest += left
-        t2 += float(s2)
-        t3 += float(s3)
-        t4 += float(s4)
-        t5 += float(s5)
-        t6 += float(s6)
-        t7 += float(s7)
-        t8 += float(s8)
-    room[row, 1] = t1 + rest
-    room[row, 2] = t2
-    room[row, 3] = t3
-    room[row, 4] = t4
-    room[row, 5] = t5
-    room[row, 6] = t6
-    room[row, 7] = t7
-    room[row, 8] = t8
-    room[row, LEAST] = lowest
-    room[row, MOST] = highest
+def _make_stream_sums(order, weighted):
+    """Begin with nothing, add readings, fold the lanes: of a stream."""
+    lanes = lanes_for(order, weighted)
+    rows = order + (7 if weighted else 2)
+    least, most = (0, order + 2) if weighted else (0,), (order + 1,)
+    wide = make_tile(order, _WIDTH, lanes // _WIDTH, BESIDE)
+    single = make_tile(order, 1, 1, BESIDE)
+    begin, fold = make_begin(rows, least, most, lanes), make_fold(rows, least, most, lanes)
+    name = f"{'weighted_' if weighted else ''}sums_{order}"
+
+    @internal_as(f"begin_{name}")
+    def begin_sums(pivot):
+        room = np.empty((rows + 2, lanes))
+        sums, rests, pivots = room[:rows], room[rows], room[rows + 1]
+        begin(sums, rests, pivots, pivot)
+        return sums, rests, pivots
+
+    @internal_as(f"add_to_{name}")
+    def add_readings(x, w, pivots, sums, rests):
+        keep_apart()
+        rows = x.size // lanes
+        for first in range(0, rows, STRETCH_ROWS):
+            last = min(first + STRETCH_ROWS, rows)
+            wide(x, lanes, w, first, last, 0, pivots, sums, rests)
+        for lane in range(x.size - rows * lanes):
+            single(x, lanes, w, rows, rows + 1, lane, pivots, sums, rests)
+
+    @internal_as(f"fold_{name}")
+    def fold_sums(sums, rests, kept, room, row):
+        keep_apart()
+        fold(sums, rests)
+        for k in range(1, kept + 1):
+            room[row, k] = sums[k, 0]
+        room[row, LEAST], room[row, MOST] = sums[0, 0], sums[order + 1, 0]
+        if weighted:
+            room[row, LIGHTEST], room[row, 0] = sums[order + 2, 0], sums[order + 3, 0]
+            for j in range(2, 5):
+                room[row, POWERS + j] = sums[order + 2 + j, 0]
+
+    @internal_as(f"all_{name}")
+    def all_sums(x, w, pivot, kept, room, row):
+        keep_apart()
+        sums, rests, pivots = begin_sums(pivot)
+        add_readings(x, w, pivots, sums, rests)
+        fold_sums(sums, rests, kept, room, row)
+
+    return begin_sums, add_readings, fold_sums, all_sums
 
 
-@internal(fastmath=REORDER)
-def _sums_upper(x, pivot, room, row):
-    """The sums of order 9 to 16."""
-    keep_apart()
-    t9 = t10 = t11 = t12 = t13 = t14 = t15 = t16 = 0.0
-    for start in range(0, x.size, STRETCH):
-        part = x[start : min(start + STRETCH, x.size)]
-        s9 = s10 = s11 = s12 = s13 = s14 = s15 = s16 = 0.0
-        for i in range(part.size):
-            d = extended(part[i] - pivot)
-            d2 = d * d
-            d3 = d2 * d
-            d4 = d2 * d2
-            d8 = d4 * d4
-            d12 = d8 * d4
-            s9 += d8 * d
-            s10 += d8 * d2
-            s11 += d8 * d3
-            s12 += d12
-            s13 += d12 * d
-            s14 += d12 * d2
-            s15 += d12 * d3
-            s16 += d8 * d8
-        t9 += float(s9)
-        t10 += float(s10)
-        t11 += float(s11)
-        t12 += float(s12)
-        t13 += float(s13)
-        t14 += float(s14)
-        t15 += float(s15)
-        t16 += float(s16)
-    room[row, 9] = t9
-    room[row, 10] = t10
-    room[row, 11] = t11
-    room[row, 12] = t12
-    room[row, 13] = t13
-    room[row, 14] = t14
-    room[row, 15] = t15
-    room[row, 16] = t16
+def _make_add_rows(order):
+    """Add rows of all channels to their sums: tiles of eight as far as they go, then single."""
+    wide, single = make_tile(order, _WIDTH, 1, BY_ROW), make_tile(order, 1, 1, BY_ROW)
+
+    @internal_as(f"add_rows_{order}")
+    def add_rows(x, w, first, last, pivots, sums, rests):
+        keep_apart()
+        channel = 0
+        while channel + _WIDTH <= pivots.size:
+            wide(x, pivots.size, w, first, last, channel, pivots, sums, rests)
+            channel += _WIDTH
+        while channel < pivots.size:
+            single(x, pivots.size, w, first, last, channel, pivots, sums, rests)
+            channel += 1
+
+    return add_rows
+
+
+_begin_2, _add_2, _fold_2, _all_2 = _make_stream_sums(2, False)
+_begin_4, _add_4, _fold_4, _all_4 = _make_stream_sums(4, False)
+_begin_8, _add_8, _fold_8, _all_8 = _make_stream_sums(8, False)
+_begin_16, _add_16, _fold_16, _all_16 = _make_stream_sums(16, False)
+_weighted_2, _weighted_4, _weighted_8, _weighted_16 = (
+    _make_stream_sums(order, True)[3] for order in (2, 4, 8, 16)
+)
+_add_rows_2, _add_rows_4 = _make_add_rows(2), _make_add_rows(4)
+_add_rows_8, _add_rows_16 = _make_add_rows(8), _make_add_rows(16)
 
 
 @internal
-def power_sums(x, pivot, order, room, row):
-    keep_apart()
-    room[row, 0] = x.size
+def begin_sums(order, pivot):
+    """Sums, rests and pivots of a stream's lanes, for readings that come in stretches."""
     if order <= 2:
-        _sums_2(x, pivot, room, row)
-    elif order <= 4:
-        _sums_4(x, pivot, room, row)
-    else:
-        _sums_8(x, pivot, room, row)
-        if order > 8:
-            _sums_upper(x, pivot, room, row)
-
-
-@internal(fastmath=REORDER)
-def _weighted_sums_4(x, w, pivot, room, row):
-    keep_apart()
-    t0 = t1 = t2 = t3 = t4 = u2 = u3 = u4 = 0.0
-    rest = 0.0
-    lowest, highest = np.inf, -np.inf
-    lightest = np.inf
-    for start in range(0, x.size, STRETCH):
-        part = x[start : min(start + STRETCH, x.size)]
-        weight = w[start : min(start + STRETCH, x.size)]
-        s0 = s1 = s2 = s3 = s4 = v2 = v3 = v4 = 0.0
-        least, most = np.inf, -np.inf
-        light = np.inf
-        for i in range(part.size):
-            value = part[i]
-            d = extended(value - pivot)
-            least = lesser(value, least)
-            most = greater(value, most)
-            q = weight[i]
-            light = lesser(q, light)
-            d2 = d * d
-            qd = q * d
-            qd2 = qd * d
-            q2 = q * q
-            s0 += q
-            s1 += qd
-            s2 += qd2
-            s3 += qd * d2
-            s4 += qd2 * d2
-            v2 += q2
-            v3 += q2 * q
-            v4 += q2 * q2
-        lowest = lesser(least, lowest)
-        highest = greater(most, highest)
-        lightest = lesser(light, lightest)
-        t0 += float(s0)
-        t1, left = two_sum(t1, float(s1))
-        rest += left
-        t2 += float(s2)
-        t3 += float(s3)
-        t4 += float(s4)
-        u2 += float(v2)
-        u3 += float(v3)
-        u4 += float(v4)
-    room[row, 0] = t0
-    room[row, 1] = t1 + rest
-    room[row, 2] = t2
-    room[row, 3] = t3
-    room[row, 4] = t4
-    room[row, POWERS + 2] = u2
-    room[row, POWERS + 3] = u3
-    room[row, POWERS + 4] = u4
-    room[row, LEAST] = lowest
-    room[row, MOST] = highest
-    room[row, LIGHTEST] = lightest
-
-
-@internal(fastmath=REORDER)
-def _weighted_sums_upper(x, w, pivot, base, room, row):
-    """Six sums from order ``base + 1`` on; ``base`` is 4 or 10."""
-    keep_apart()
-    t1 = t2 = t3 = t4 = t5 = t6 = 0.0
-    for start in range(0, x.size, STRETCH):
-        part = x[start : min(start + STRETCH, x.size)]
-        weight = w[start : min(start + STRETCH, x.size)]
-        s1 = s2 = s3 = s4 = s5 = s6 = 0.0
-        for i in range(part.size):
-            d = extended(part[i] - pivot)
-            d2 = d * d
-            d4 = d2 * d2
-            lift = weight[i] * d4
-            if base == 10:
-                lift *= d4 * d2
-            s1 += lift * d
-            s2 += lift * d2
-            s3 += lift * d2 * d
-            s4 += lift * d4
-            s5 += lift * d4 * d
-            s6 += lift * d4 * d2
-        t1 += float(s1)
-        t2 += float(s2)
-        t3 += float(s3)
-        t4 += float(s4)
-        t5 += float(s5)
-        t6 += float(s6)
-    room[row, base + 1] = t1
-    room[row, base + 2] = t2
-    room[row, base + 3] = t3
-    room[row, base + 4] = t4
-    room[row, base + 5] = t5
-    room[row, base + 6] = t6
+        return _begin_2(pivot)
+    if order <= 4:
+        return _begin_4(pivot)
+    return _begin_8(pivot) if order <= 8 else _begin_16(pivot)
 
 
 @internal
-def weighted_power_sums(x, w, pivot, order, room, row):
+def add_readings(x, order, pivots, sums, rests):
+    """Add readings; but for the last time, a multiple of ``STRETCH``."""
+    if order <= 2:
+        _add_2(x, None, pivots, sums, rests)
+    elif order <= 4:
+        _add_4(x, None, pivots, sums, rests)
+    elif order <= 8:
+        _add_8(x, None, pivots, sums, rests)
+    else:
+        _add_16(x, None, pivots, sums, rests)
+
+
+@internal
+def fold_sums(sums, rests, order, room, row):
+    """The lanes become one, in ``room[row]``."""
+    if order <= 2:
+        _fold_2(sums, rests, order, room, row)
+    elif order <= 4:
+        _fold_4(sums, rests, order, room, row)
+    elif order <= 8:
+        _fold_8(sums, rests, order, room, row)
+    else:
+        _fold_16(sums, rests, order, room, row)
+
+
+@internal
+def _add_rows(x, w, first, last, pivots, sums, rests):
+    if sums.shape[0] == 4:
+        _add_rows_2(x, w, first, last, pivots, sums, rests)
+    elif sums.shape[0] == 6:
+        _add_rows_4(x, w, first, last, pivots, sums, rests)
+    elif sums.shape[0] == 10:
+        _add_rows_8(x, w, first, last, pivots, sums, rests)
+    else:
+        _add_rows_16(x, w, first, last, pivots, sums, rests)
+
+
+@internal
+def sums_kept(order):
+    """How many sums are kept for an order: 2, 4, 8 or 16."""
+    size = 2
+    while size < order:
+        size *= 2
+    return size
+
+
+@internal
+def new_channel_sums(order, channels):
+    """Sums and rests of nothing, for channels."""
+    sums, rests = np.empty((sums_kept(order) + 2, channels)), np.empty(channels)
+    clear_sums(sums, rests)
+    return sums, rests
+
+
+@internal
+def clear_sums(sums, rests):
+    """The sums and rests of channels, of nothing again."""
+    last = sums.shape[0] - 1
+    for j in range(rests.size):
+        sums[0, j] = np.inf
+        for k in range(1, last):
+            sums[k, j] = 0.0
+        sums[last, j] = -np.inf
+        rests[j] = 0.0
+
+
+@internal
+def power_sums(x, w, pivot, order, room, row):
+    """Sums, extremes and weight of a stream's readings."""
     keep_apart()
-    _weighted_sums_4(x, w, pivot, room, row)
-    if order > 4:
-        _weighted_sums_upper(x, w, pivot, _FIRST_UPPER, room, row)
-    if order > 10:
-        _weighted_sums_upper(x, w, pivot, _SECOND_UPPER, room, row)
+    if w is None:
+        room[row, 0] = x.size
+        if order <= 2:
+            _all_2(x, None, pivot, order, room, row)
+        elif order <= 4:
+            _all_4(x, None, pivot, order, room, row)
+        elif order <= 8:
+            _all_8(x, None, pivot, order, room, row)
+        else:
+            _all_16(x, None, pivot, order, room, row)
+    elif order <= 2:
+        _weighted_2(x, w, pivot, order, room, row)
+    elif order <= 4:
+        _weighted_4(x, w, pivot, order, room, row)
+    elif order <= 8:
+        _weighted_8(x, w, pivot, order, room, row)
+    else:
+        _weighted_16(x, w, pivot, order, room, row)
+
+
+@internal
+def weight_sums(w, room, row):
+    """The sums of w, w**2, w**3, w**4 and the least weight."""
+    found = np.empty((1, ROOM))
+    _all_4(w, None, 0.0, _FOURTH, found, _ONLY)
+    room[row, 0] = found[0, 1]
+    for j in range(2, 5):
+        room[row, POWERS + j] = found[0, j]
+    room[row, LIGHTEST] = found[0, LEAST]
+
+
+@internal(fastmath=REORDER)
+def _fetch(readings):
+    """Read in the order of memory, which streams; tile by tile it would not."""
+    total = 0.0
+    for i in range(readings.size):
+        total += readings[i]
+    return total
+
+
+@internal
+def row_sums(x, w, pivots, sums, rests):
+    """Sums and extremes of every channel over all rows of ``x``, shape (rows, channels)."""
+    channels = x.shape[1]
+    flat = x.reshape(x.size)
+    clear_sums(sums, rests)
+    fetched = np.empty(1)
+    for first in range(0, x.shape[0], STRETCH_ROWS):
+        last = min(first + STRETCH_ROWS, x.shape[0])
+        fetched[0] = _fetch(flat[first * channels : last * channels])
+        _add_rows(flat, w, first, last, pivots, sums, rests)
+    for j in range(channels):
+        sums[1, j] += rests[j]
+
+
+@internal
+def column_sums(x, w, pivot, order, room, row):
+    """``row_sums`` of one channel, its readings in a row, into ``room[row]``."""
+    sums, rests = new_channel_sums(order, 1)
+    row_sums(x.reshape((x.size, 1)), w, np.full(1, pivot), sums, rests)
+    copy_sums(sums, 0, order, room, row)
+    if w is None:
+        room[row, 0] = x.size
+    else:
+        weight_sums(w, room, row)
+
+
+@internal
+def copy_sums(sums, channel, order, room, row):
+    room[row, LEAST] = sums[0, channel]
+    room[row, MOST] = sums[sums.shape[0] - 1, channel]
+    for k in range(1, order + 1):
+        room[row, k] = sums[k, channel]

@@ -1,12 +1,17 @@
-"""Power sums of many channels at once: vector instructions written out.
+"""Power sums of several runs of readings side by side: vector instructions written out.
 
-``sum_tile(x, w, first, last, channel, pivots, sums)`` adds the powers of ``x - pivot``, row by row
-from ``first`` to ``last``, of channels ``channel`` onwards (eight or one) to ``sums``.  A channel's
-readings are added in their order with fused multiply-add: its bits depend neither on how many
-channels there are, nor on its place among them, nor on whether its block was scaled first.
-LLVM's own vectoriser gave up on the overlap checks between the rows here (three times slower).
+``sum_tile(x, length, w, first, last, place, pivots, sums, rests)`` takes rows ``first`` to
+``last`` of ``length`` readings each from the flat array ``x``, and of each row the readings from
+``place`` on, as many as the tile is wide: one lane each.  A lane's powers of ``x - pivot`` are
+added up row by row with fused multiply-add, and the totals then to the lane's ``sums``.  A lane's
+bits depend neither on how wide the tile is, nor on its place, nor on the kind of vector unit.
+(LLVM's own vectoriser orders additions as it likes, which no two types of readings need share; and
+it gave up on the overlap checks between rows, three times slower.)
 
-``sums`` has ``order + 2`` rows: the least reading, the sums of order 1 to ``order``, the greatest.
+``sums`` has ``order + 2`` rows of ``length`` lanes: the least reading, the sums of order 1 to
+``order``, the greatest.  The sum of first order, which the mean rests on, is carried with what each
+addition to the totals leaves, in ``rests``: readings far out on both sides would cost it digits.
+Where weights lie beside the readings, five rows follow: the least weight, the sums of w .. w**4.
 """
 
 import numpy as np
@@ -14,12 +19,11 @@ from llvmlite import ir
 from numba.core import cgutils, types
 from numba.extending import intrinsic
 
-from .compiling import PLAIN_PYTHON, REORDER, internal, internal_as, keep_apart
-from .sums import LEAST, LIGHTEST, MOST, POWERS
-from .vector import two_sum
+from .compiling import PLAIN_PYTHON
 
-TILE = 8
-STRETCH_ROWS = 32  # rows added up before they go to the totals
+# How weights lie: one for each row, or one beside each reading.
+BY_ROW, BESIDE = "by row", "beside"
+_EIGHT = 8
 
 
 def _powers(order):
@@ -27,227 +31,336 @@ def _powers(order):
     return [(k // 2, k - k // 2) for k in range(2, order + 1)]
 
 
-def _tile_intrinsic(order, width):
-    double = ir.DoubleType()
-    kind = ir.VectorType(double, width) if width > 1 else double
-    fused_name = f"llvm.fma.v{width}f64" if width > 1 else "llvm.fma.f64"
+class Vectors:
+    """Vector instructions of one width, appended to a block of code."""
 
+    def __init__(self, context, builder, signature, arguments, width):
+        self._context, self._builder = context, builder
+        self._signature, self._arguments = signature, arguments
+        self._width = width
+        self.kind = self._of(ir.DoubleType())
+        name = f"llvm.fma.v{width}f64" if width > 1 else "llvm.fma.f64"
+        self._fused = cgutils.get_or_insert_function(
+            builder.module, ir.FunctionType(self.kind, [self.kind] * 3), name
+        )
+
+    def _of(self, scalar):
+        return ir.VectorType(scalar, self._width) if self._width > 1 else scalar
+
+    def array(self, position):
+        array = self._context.make_array(self._signature.args[position])
+        return array(self._context, self._builder, self._arguments[position])
+
+    def data(self, position):
+        return self.array(position).data
+
+    def load(self, base, index):
+        """What lies from ``index`` on, in the precision it has."""
+        pointer = self._builder.gep(base, [index])
+        scalar = base.type.pointee
+        pointer = self._builder.bitcast(pointer, self._of(scalar).as_pointer())
+        return self._builder.load(pointer, align=4 if scalar == ir.FloatType() else 8)
+
+    def double(self, value):
+        """Widened, where it is of single precision."""
+        return value if value.type == self.kind else self._builder.fpext(value, self.kind)
+
+    def like(self, value, base):
+        """Doubles in the precision of ``base``."""
+        kind = self._of(base.type.pointee)
+        return value if kind == self.kind else self._builder.fptrunc(value, kind)
+
+    def store(self, value, base, index):
+        pointer = self._builder.gep(base, [index])
+        pointer = self._builder.bitcast(pointer, self.kind.as_pointer())
+        self._builder.store(value, pointer, align=8)
+
+    def everywhere(self, base, index):
+        """One double in every lane."""
+        value = self._builder.load(self._builder.gep(base, [index]))
+        return value if self._width == 1 else self.spread(value)
+
+    def spread(self, value):
+        """One double in every lane."""
+        result = ir.Constant(self.kind, ir.Undefined)
+        for lane in range(self._width):
+            result = self._builder.insert_element(result, value, ir.IntType(32)(lane))
+        return result
+
+    def zero(self):
+        zero = ir.Constant(ir.DoubleType(), 0.0)
+        return zero if self._width == 1 else ir.Constant(self.kind, [zero] * self._width)
+
+    def fused(self, a, b, c):
+        return self._builder.call(self._fused, (a, b, c))
+
+    def extreme(self, comparison, a, b):
+        flags = ("nnan", "nsz")
+        condition = self._builder.fcmp_ordered(comparison, a, b, flags)
+        return self._builder.select(condition, a, b, flags)
+
+    def _halves(self, value):
+        half = value.type.count // 2
+        nothing = ir.Constant(value.type, ir.Undefined)
+        places = ir.VectorType(ir.IntType(32), half)
+        masks = [ir.Constant(places, list(range(i, i + half))) for i in (0, half)]
+        return [self._builder.shuffle_vector(value, nothing, mask) for mask in masks]
+
+    def folded(self, parts, join):
+        """Vectors become one, and its lanes one, by halves."""
+        while len(parts) > 1:
+            half = len(parts) // 2
+            parts = [join(parts[i], parts[i + half]) for i in range(half)]
+        (value,) = parts
+        while value.type.count > 1:
+            value = join(*self._halves(value))
+        return self._builder.extract_element(value, ir.IntType(32)(0))
+
+    def two_sum(self, a, b):
+        """The rounded sum, and what the rounding left (Knuth)."""
+        add, subtract = self._builder.fadd, self._builder.fsub
+        total = add(a, b)
+        shadow = subtract(total, a)
+        return total, add(subtract(a, subtract(total, shadow)), subtract(b, shadow))
+
+
+def _tile_intrinsic(order, width, runs, lie):
     @intrinsic
-    def sum_tile(typing_context, x, w, first, last, channel, pivots, sums):
+    def sum_tile(typing_context, x, length, w, first, last, place, pivots, sums, rests):
         weighted = not isinstance(w, types.NoneType)
+        with_weight_sums = weighted and lie == BESIDE
 
         def generate(context, builder, signature, arguments):
-            def data(position):
-                array = context.make_array(signature.args[position])
-                return array(context, builder, arguments[position]).data
+            v = Vectors(context, builder, signature, arguments, width)
+            _, row_length, _, start, stop, place, _, _, _ = arguments
+            readings, weights = v.data(0), v.data(2) if weighted else None
+            totals, left = v.data(7), v.data(8)
+            # The rows of ``sums``: extremes, sums, and the weights' own.
+            least, most, lightest = 0, order + 1, order + 2
+            rows = order + 2 + (5 if with_weight_sums else 0)
+            precision = {least: readings, most: readings, lightest: weights}
 
-            def load(base, index):
-                pointer = builder.gep(base, [index])
-                pointer = builder.bitcast(pointer, kind.as_pointer())
-                return builder.load(pointer, align=8)
+            def constant(value):
+                return ir.Constant(place.type, value)
 
-            def store(value, base, index):
-                pointer = builder.gep(base, [index])
-                pointer = builder.bitcast(pointer, kind.as_pointer())
-                builder.store(value, pointer, align=8)
+            lanes = [builder.add(place, constant(run * width)) for run in range(runs)]
+            # The lanes of a stream have one pivot.
+            everywhere = v.everywhere(v.data(6), place) if lie == BESIDE else None
 
-            def broadcast(value):
-                if width == 1:
-                    return value
-                spread = ir.Constant(kind, ir.Undefined)
-                for lane in range(width):
-                    spread = builder.insert_element(spread, value, ir.IntType(32)(lane))
-                return spread
+            def position(k, lane):
+                return builder.add(lane, builder.mul(row_length, constant(k)))
 
-            def extreme(comparison, a, b):
-                flags = ("nnan", "nsz")
-                return builder.select(builder.fcmp_ordered(comparison, a, b, flags), a, b, flags)
+            def new_cells(lane):
+                cells = []
+                for k in range(rows):
+                    begin = v.zero()
+                    if k in precision:  # extremes, found in the precision of the readings
+                        begin = v.like(v.load(totals, position(k, lane)), precision[k])
+                    cells.append(cgutils.alloca_once_value(builder, begin))
+                return cells
 
-            fused = cgutils.get_or_insert_function(
-                builder.module, ir.FunctionType(kind, [kind] * 3), fused_name
-            )
-            _, _, start, stop, place, _, _ = arguments
-            rows = context.make_array(signature.args[0])(context, builder, arguments[0])
-            row_length = builder.extract_value(rows.shape, 1)
-            readings, weights, totals = data(0), data(1) if weighted else None, data(6)
-            pivot = load(data(5), place)
-            cells = [cgutils.alloca_once(builder, kind) for _ in range(order + 2)]
-            positions = [
-                builder.add(place, builder.mul(row_length, ir.Constant(place.type, k)))
-                for k in range(order + 2)
-            ]
-            for k in range(order + 2):
-                builder.store(load(totals, positions[k]), cells[k])
-            count = builder.sub(stop, start)
-            with cgutils.for_range(builder, count) as loop:
-                row = builder.add(loop.index, start)
-                value = load(readings, builder.add(builder.mul(row, row_length), place))
-                power = {1: builder.fsub(value, pivot)}
+            def add_to(cell, value):
+                builder.store(builder.fadd(builder.load(cell), value), cell)
+
+            def keep(cell, comparison, value):
+                builder.store(v.extreme(comparison, value, builder.load(cell)), cell)
+
+            def add(cells, pivot, value, weight):
+                power = {1: builder.fsub(v.double(value), pivot)}
                 lifted = dict(power)
-                if weighted:
-                    weight = broadcast(builder.load(builder.gep(weights, [row])))
+                if weight is not None:
                     lifted[1] = builder.fmul(weight, power[1])
-                total = builder.load(cells[1])
-                builder.store(builder.fadd(total, lifted[1]), cells[1])
+                add_to(cells[1], lifted[1])
                 pairs = _powers(order)
                 for k, (a, b) in enumerate(pairs, start=2):
-                    total = builder.load(cells[k])
-                    builder.store(builder.call(fused, (lifted[a], power[b], total)), cells[k])
-                    if any(k in pair for pair in pairs[k - 1 :]):
+                    needed = any(k in pair for pair in pairs[k - 1 :])
+                    if needed:
                         power[k] = builder.fmul(power[a], power[b])
-                        lifted[k] = builder.fmul(lifted[a], power[b]) if weighted else power[k]
-                for cell, comparison in ((cells[0], "<"), (cells[order + 1], ">")):
-                    builder.store(extreme(comparison, value, builder.load(cell)), cell)
-            for k in range(order + 2):
-                store(builder.load(cells[k]), totals, positions[k])
+                        lifted[k] = power[k]
+                        if weight is not None:
+                            lifted[k] = builder.fmul(lifted[a], power[b])
+                    # Additions and multiplications have units of their own: keep both busy.
+                    if needed and order > 4:
+                        add_to(cells[k], lifted[k])
+                    else:
+                        fused = v.fused(lifted[a], power[b], builder.load(cells[k]))
+                        builder.store(fused, cells[k])
+                keep(cells[least], "<", value)
+                keep(cells[most], ">", value)
+                if with_weight_sums:
+                    square = builder.fmul(weight, weight)
+                    keep(cells[lightest], "<", weight)
+                    add_to(cells[lightest + 1], weight)
+                    for j, (a, b) in enumerate(
+                        ((weight, weight), (square, weight), (square, square)), start=2
+                    ):
+                        cell = cells[lightest + j]
+                        builder.store(v.fused(a, b, builder.load(cell)), cell)
+
+            own = [new_cells(lane) for lane in lanes]
+            pivots_of = [everywhere or v.load(v.data(6), lane) for lane in lanes]
+            with cgutils.for_range(builder, builder.sub(stop, start)) as loop:
+                row = builder.add(loop.index, start)
+                begin = builder.mul(row, row_length)
+                for cells, pivot, lane in zip(own, pivots_of, lanes, strict=True):
+                    index = builder.add(begin, lane)
+                    weight = None
+                    if weighted:
+                        beside = lie == BESIDE
+                        weight = v.load(weights, index) if beside else v.everywhere(weights, row)
+                    add(cells, pivot, v.load(readings, index), weight)
+            for cells, lane in zip(own, lanes, strict=True):
+                for k, cell in enumerate(cells):
+                    found = builder.load(cell)
+                    if k == 1:
+                        found, rest = v.two_sum(v.load(totals, position(1, lane)), found)
+                        v.store(builder.fadd(v.load(left, lane), rest), left, lane)
+                    elif k not in precision:
+                        found = builder.fadd(v.load(totals, position(k, lane)), found)
+                    v.store(v.double(found), totals, position(k, lane))
             return context.get_dummy_value()
 
-        return types.void(x, w, first, last, channel, pivots, sums), generate
+        return types.void(x, length, w, first, last, place, pivots, sums, rests), generate
 
     return sum_tile
 
 
-def _tile_plain(order, width):
+def _begin_intrinsic(rows, least, most, lanes):
+    """``begin(sums, rests, pivots, pivot)``: nothing yet, in all lanes of a stream.
+
+    ``least`` and ``most`` are the rows of ``sums`` that hold extremes.
+    """
+
+    @intrinsic
+    def begin(typing_context, sums, rests, pivots, pivot):
+        def generate(context, builder, signature, arguments):
+            v = Vectors(context, builder, signature, arguments, _EIGHT)
+            index = cgutils.intp_t
+
+            def fill(base, value, length):
+                for place in range(0, length, _EIGHT):
+                    v.store(value, base, index(place))
+
+            totals = v.data(0)
+            for k in range(rows):
+                value = np.inf if k in least else -np.inf if k in most else 0.0
+                constant = ir.Constant(v.kind, [ir.Constant(ir.DoubleType(), value)] * _EIGHT)
+                for place in range(0, lanes, _EIGHT):
+                    v.store(constant, totals, index(k * lanes + place))
+            fill(v.data(1), v.zero(), lanes)
+            fill(v.data(2), v.spread(arguments[3]), lanes)
+            return context.get_dummy_value()
+
+        return types.void(sums, rests, pivots, pivot), generate
+
+    return begin
+
+
+def _begin_plain(rows, least, most, lanes):
+    def begin(sums, rests, pivots, pivot):
+        for k in range(rows):
+            sums[k] = np.inf if k in least else -np.inf if k in most else 0.0
+        rests[:] = 0.0
+        pivots[:] = pivot
+
+    return begin
+
+
+def _fold_intrinsic(rows, least, most, lanes):
+    """``fold(sums, rests)``: the lanes become one, by halves; row k is then ``sums[k, 0]``."""
+
+    @intrinsic
+    def fold(typing_context, sums, rests):
+        def generate(context, builder, signature, arguments):
+            v = Vectors(context, builder, signature, arguments, _EIGHT)
+            totals, index = v.data(0), cgutils.intp_t
+
+            def parts_of(base, begin):
+                return [v.load(base, index(begin + place)) for place in range(0, lanes, _EIGHT)]
+
+            left = parts_of(v.data(1), 0)
+
+            def add_first(a, b):
+                total, rest = v.two_sum(a, b)
+                lost.append(rest)
+                return total
+
+            for k in range(rows):
+                parts = parts_of(totals, k * lanes)
+                if k in least or k in most:
+                    comparison = "<" if k in least else ">"
+                    value = v.folded(parts, lambda a, b, c=comparison: v.extreme(c, a, b))
+                elif k == 1:
+                    lost: list = []
+                    value = v.folded(parts, add_first)
+                    rest = v.folded(left, builder.fadd)
+                    for part in lost:
+                        rest = builder.fadd(rest, v.folded([part], builder.fadd))
+                    value = builder.fadd(value, rest)
+                else:
+                    value = v.folded(parts, builder.fadd)
+                builder.store(value, builder.gep(totals, [index(k * lanes)]))
+            return context.get_dummy_value()
+
+        return types.void(sums, rests), generate
+
+    return fold
+
+
+def _fold_plain(rows, least, most, lanes):
+    def fold(sums, rests):
+        for k in range(rows):
+            if k in least or k in most:
+                sums[k, 0] = (min if k in least else max)(sums[k].tolist())
+                continue
+            parts, lost = sums[k].tolist(), rests.tolist() if k == 1 else []
+            while len(parts) > 1:
+                half = len(parts) // 2
+                pairs = list(zip(parts[:half], parts[half:], strict=True))
+                parts = [a + b for a, b in pairs]
+                if k == 1:
+                    for (a, b), total in zip(pairs, parts, strict=True):
+                        shadow = total - a
+                        lost.append((a - (total - shadow)) + (b - shadow))
+            sums[k, 0] = parts[0] + sum(lost)
+
+    return fold
+
+
+def _tile_plain(order, width, runs, lie):
     """The same in plain Python (without fused multiply-add)."""
 
-    def sum_tile(x, w, first, last, channel, pivots, sums):
-        for j in range(channel, channel + width):
+    def sum_tile(x, length, w, first, last, place, pivots, sums, rests):
+        for j in range(place, place + width * runs):
+            found = [0.0] * (order + 1)
+            of_weights = [0.0] * 5
             for i in range(first, last):
-                value = x[i, j]
+                value = float(x[i * length + j])
                 power = [1.0, value - pivots[j]]
-                weight = 1.0 if w is None else w[i]
-                sums[1, j] += weight * power[1]
+                weight = 1.0 if w is None else w[i * length + j if lie == BESIDE else i]
+                found[1] += weight * power[1]
                 for k, (a, b) in enumerate(_powers(order), start=2):
                     power.append(power[a] * power[b])
-                    sums[k, j] += weight * power[a] * power[b]
+                    found[k] += weight * power[a] * power[b]
                 sums[0, j] = min(sums[0, j], value)
                 sums[order + 1, j] = max(sums[order + 1, j], value)
+                if w is not None and lie == BESIDE:
+                    sums[order + 2, j] = min(sums[order + 2, j], weight)
+                    for k in range(1, 5):
+                        of_weights[k] += weight**k
+            total = sums[1, j] + found[1]
+            shadow = total - sums[1, j]
+            rests[j] += (sums[1, j] - (total - shadow)) + (found[1] - shadow)
+            sums[1, j] = total
+            for k in range(2, order + 1):
+                sums[k, j] += found[k]
+            if w is not None and lie == BESIDE:
+                for k in range(1, 5):
+                    sums[order + 2 + k, j] += of_weights[k]
 
     return sum_tile
 
 
-_make_tile = _tile_plain if PLAIN_PYTHON else _tile_intrinsic
-
-
-def _make_add_rows(order):
-    """Tiles of eight channels as far as they go, then single channels."""
-    wide, single = _make_tile(order, TILE), _make_tile(order, 1)
-
-    @internal_as(f"add_rows_{order}")
-    def add_rows(x, w, first, last, pivots, sums):
-        keep_apart()
-        channel = 0
-        while channel + TILE <= pivots.size:
-            wide(x, w, first, last, channel, pivots, sums)
-            channel += TILE
-        while channel < pivots.size:
-            single(x, w, first, last, channel, pivots, sums)
-            channel += 1
-
-    return add_rows
-
-
-_add_rows_2, _add_rows_4 = _make_add_rows(2), _make_add_rows(4)
-_add_rows_8, _add_rows_16 = _make_add_rows(8), _make_add_rows(16)
-
-
-@internal
-def _add_rows(x, w, first, last, pivots, sums):
-    if sums.shape[0] == 4:
-        _add_rows_2(x, w, first, last, pivots, sums)
-    elif sums.shape[0] == 6:
-        _add_rows_4(x, w, first, last, pivots, sums)
-    elif sums.shape[0] == 10:
-        _add_rows_8(x, w, first, last, pivots, sums)
-    else:
-        _add_rows_16(x, w, first, last, pivots, sums)
-
-
-@internal(fastmath=REORDER)
-def _fetch(readings):
-    """Read in the order of memory, which streams; tile by tile it would not."""
-    total = 0.0
-    for i in range(readings.size):
-        total += readings[i]
-    return total
-
-
-@internal
-def row_sums(x, w, pivots, sums, part):
-    """Sums and extremes of every channel over all rows of ``x``, shape (rows, channels).
-
-    ``part`` is room of the shape of ``sums``.
-    """
-    channels = x.shape[1]
-    most = sums.shape[0] - 1
-    flat = x.reshape(x.size)
-    rests = np.zeros(channels)
-    # A part of the block that stays in the cache between fetching and adding.
-    rows = STRETCH_ROWS if channels <= 256 else STRETCH_ROWS // 4
-    for j in range(channels):
-        for k in range(1, most):
-            sums[k, j] = part[k, j] = 0.0
-        part[0, j] = np.inf
-        part[most, j] = -np.inf
-    for first in range(0, x.shape[0], rows):
-        last = min(first + rows, x.shape[0])
-        sums[0, 0] = _fetch(flat[first * channels : last * channels])
-        _add_rows(x, w, first, last, pivots, part)
-        if last % STRETCH_ROWS == 0 or last == x.shape[0]:
-            for j in range(channels):
-                sums[1, j], left = two_sum(sums[1, j], part[1, j])
-                rests[j] += left
-            for k in range(1, most):
-                for j in range(channels):
-                    if k > 1:
-                        sums[k, j] += part[k, j]
-                    part[k, j] = 0.0
-    for j in range(channels):
-        sums[1, j] += rests[j]
-        sums[0, j] = part[0, j]
-        sums[most, j] = part[most, j]
-
-
-@internal
-def weight_sums(w, room, row):
-    """The sums of w, w**2, w**3, w**4 and the least weight, in ``sums.power_sums``' places."""
-    lightest = np.inf
-    # The weight divides every channel's sum: it is added up with what each rounding leaves.
-    s1 = rest = s2 = s3 = s4 = 0.0
-    for i in range(w.size):
-        square = w[i] * w[i]
-        s1, left = two_sum(s1, w[i])
-        rest += left
-        s2 += square
-        s3 += square * w[i]
-        s4 += square * square
-        lightest = min(lightest, w[i])
-    s1 += rest
-    room[row, 0] = s1
-    room[row, POWERS + 2] = s2
-    room[row, POWERS + 3] = s3
-    room[row, POWERS + 4] = s4
-    room[row, LIGHTEST] = lightest
-
-
-@internal
-def column_sums(x, w, pivot, order, room, row):
-    """``row_sums`` of one channel, its readings in a row, into ``room[row]``."""
-    size = 2
-    while size < order:
-        size *= 2
-    sums = np.empty((size + 2, 1))
-    row_sums(x.reshape((x.size, 1)), w, np.full(1, pivot), sums, np.empty((size + 2, 1)))
-    copy_sums(sums, 0, order, room, row)
-    if w is None:
-        room[row, 0] = x.size
-    else:
-        weight_sums(w, room, row)
-
-
-@internal
-def copy_sums(sums, channel, order, room, row):
-    room[row, LEAST] = sums[0, channel]
-    room[row, MOST] = sums[sums.shape[0] - 1, channel]
-    for k in range(1, order + 1):
-        room[row, k] = sums[k, channel]
+make_tile = _tile_plain if PLAIN_PYTHON else _tile_intrinsic
+make_begin = _begin_plain if PLAIN_PYTHON else _begin_intrinsic
+make_fold = _fold_plain if PLAIN_PYTHON else _fold_intrinsic

@@ -9,7 +9,6 @@ from .blocks import (
     RAISE,
     TALLY,
     first_refused,
-    single_sums_agree,
     take_block,
     take_blocks,
     take_blocks_32,
@@ -138,5 +137,4 @@ def warm_up():
         fold_levels(table, blocks, 4, w is not None)
         combine_pair(table[BASE], table[NEW], 4, w is not None)
     narrow = x.astype(np.float32)
-    single_sums_agree(x, narrow, 4)
     take_blocks_32(narrow, None, 4, table[:, :8].copy(), 0, tally, extremes)

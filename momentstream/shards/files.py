@@ -6,7 +6,8 @@ import contextlib
 import os
 from typing import Any
 
-from ..accumulators import exact_moments, moments  # noqa: F401  (the reader must know their kinds)
+# The reader must know the kinds of all accumulators.
+from ..accumulators import exact_moments, joint_moments, moments  # noqa: F401
 from ..accumulators.base import Accumulator
 from ..codec import decode
 

@@ -79,7 +79,7 @@ class Regression(NamedTuple):
     intercept_error: float
 
 
-def _place(view, which):
+def place_of(view, which):
     """The index of a variable given by index or name."""
     if isinstance(which, str):
         if view.names is None or which not in view.names:
@@ -91,11 +91,11 @@ def _place(view, which):
     return place % view.dim
 
 
-def _places(view, which):
+def places_of(view, which):
     """The indices of several variables, each given by index or name, or of one."""
     if isinstance(which, str) or (np.ndim(which) == 0 and not hasattr(which, "__iter__")):
         which = [which]
-    return [_place(view, w) for w in which]
+    return [place_of(view, w) for w in which]
 
 
 def _finite_array(values, shape, name):
@@ -468,7 +468,7 @@ class JointStatistics:
         3.25
         """
         view = self._joint()
-        i = _place(view, which)
+        i = place_of(view, which)
         vector = algebra.marginal(view.vector, i)
         ends = float(view.minimum[i]), float(view.maximum[i])
         return self._summary_of(view, vector, *ends)
@@ -549,8 +549,8 @@ class JointStatistics:
         (array([2.]), 1.0)
         """
         view = self._need(2, "regress()")
-        y = _place(view, target)
-        others = [i for i in range(view.dim) if i != y] if on is None else _places(view, on)
+        y = place_of(view, target)
+        others = [i for i in range(view.dim) if i != y] if on is None else places_of(view, on)
         if y in others or len(set(others)) < len(others):
             raise ValueError(
                 f"each variable can be named once, the target among them: target={target!r}, "
