@@ -338,6 +338,39 @@ def test_a_cache_is_kept_where_it_can_be(copy_of_the_package):
     assert not worked(copy_of_the_package)
 
 
+BITS = """
+import numpy as np
+import momentstream as ms
+rng = np.random.default_rng(1)
+wide = 10.0 ** rng.uniform(-30, 30, 9 * 8192 + 77)
+single = wide.astype(np.float32)
+for state in (
+    ms.Moments().update(wide),
+    ms.Moments(2).update(single),
+    ms.Moments(2).update(single.astype(np.float64)),
+    ms.Moments(shape=2).update(wide[1:].reshape(-1, 2)),
+    ms.JointMoments(2, 3).update(wide[1:].reshape(-1, 2)),
+):
+    print(state.to_bytes().hex())
+"""
+
+
+def test_kernels_from_disk_give_the_bits_of_kernels_just_compiled(tmp_path):
+    environment = {**os.environ, "NUMBA_CACHE_DIR": str(tmp_path)}
+    compiled, loaded = (
+        subprocess.run(
+            [sys.executable, "-c", BITS],
+            env=environment,
+            check=True,
+            capture_output=True,
+            text=True,
+        ).stdout.split()
+        for _ in range(2)
+    )
+    assert compiled == loaded
+    assert compiled[1] == compiled[2]  # single precision and the same in doubles
+
+
 def test_compiled_kernels_are_never_taken_for_one_another(tmp_path):
     from momentstream.kernels.cache import _Files
 
