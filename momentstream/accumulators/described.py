@@ -17,30 +17,21 @@ if TYPE_CHECKING:
     from ..statistics.readout import Value
 
 
-class Described(Statistics):
-    """The properties of an accumulator that has a settled state, and its texts."""
+class Configured:
+    """How an accumulator was made."""
 
     __slots__ = ()
 
     if TYPE_CHECKING:
         _order: int
-        _shape: tuple[int, ...]
         _names: tuple[str, ...] | None
         _weights: str | None
         _nonfinite: str
-        _transform: str | None
-
-        def _settle(self) -> Any: ...
 
     @property
     def order(self) -> int:
         """The highest moment kept."""
         return self._order
-
-    @property
-    def shape(self) -> tuple[int, ...]:
-        """The shape of one reading."""
-        return self._shape
 
     @property
     def names(self) -> tuple[str, ...] | None:
@@ -56,6 +47,23 @@ class Described(Statistics):
     def nonfinite(self) -> str:
         """What a missing reading does: "raise", "omit" or "propagate"."""
         return self._nonfinite
+
+
+class Described(Configured, Statistics):
+    """The properties of an accumulator that has a settled state, and its texts."""
+
+    __slots__ = ()
+
+    if TYPE_CHECKING:
+        _shape: tuple[int, ...]
+        _transform: str | None
+
+        def _settle(self) -> Any: ...
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        """The shape of one reading."""
+        return self._shape
 
     @property
     def transform(self) -> str | None:

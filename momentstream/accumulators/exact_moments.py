@@ -111,6 +111,7 @@ class ExactMoments(Fed, Described, ExactStatistics):
     _names = None
     _weights = None
     _transform = None
+    _must_agree = ("order",)
 
     def __init__(self, order: int = 4, *, nonfinite: str = "raise") -> None:
         self._order = checked_order(order, _HIGHEST)
@@ -283,15 +284,6 @@ class ExactMoments(Fed, Described, ExactStatistics):
 
     def _empty(self):
         return type(self)(self._order, nonfinite=self._nonfinite)
-
-    def _gate(self, other, verb):
-        self._idle()
-        self._same_type(other)
-        if self._order != other._order:
-            raise MergeError(
-                f"{verb} needs equal order: this one has order={self._order}, the other "
-                f"order={other._order}; make both with the same order. Nothing was changed"
-            )
 
     # -- reading -----------------------------------------------------------------------------
 

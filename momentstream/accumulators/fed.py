@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from ..errors import NonFiniteError
+from ..errors import MergeError, NonFiniteError
 from .base import Accumulator
 from .conversion import pack_floats
 from .door import STRETCH, Form, stretches
@@ -30,6 +30,8 @@ class Fed(Accumulator):
 
     if TYPE_CHECKING:
         _form: Form
+        _must_agree: tuple[str, ...]
+        _names: tuple[str, ...] | None
         _nonfinite: str
         _pending: list[float] | None
         _reading: bool
@@ -95,6 +97,26 @@ class Fed(Accumulator):
         if self._reading:
             raise RuntimeError(
                 "the accumulator is being fed by an iterator that changes it; nothing was taken in"
+            )
+
+    def _gate(self, other, verb):
+        """Refuse a change by an accumulator that does not fit."""
+        self._idle()
+        self._same_type(other)
+        for name in self._must_agree:
+            mine, theirs = getattr(self, name), getattr(other, name)
+            # The number of variables may be untold yet.
+            told = name != "dim" or None not in (mine, theirs)
+            if told and mine != theirs:
+                raise MergeError(
+                    f"{verb} needs equal {name}: this one has {name}={mine!r}, the other "
+                    f"{name}={theirs!r}; make both with the same {name}. Nothing was changed"
+                )
+        mine, theirs = self._names, other._names
+        if mine is not None and theirs is not None and mine != theirs:
+            raise MergeError(
+                f"{verb} needs equal names: this one has {mine}, the other {theirs}. "
+                "Nothing was changed"
             )
 
     def _transformed(self, parts):

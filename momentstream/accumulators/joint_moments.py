@@ -16,6 +16,7 @@ from ..statistics.joint_summary import JointSummary
 from ..statistics.readout import checked_degree
 from .columns import frame_names, is_frame
 from .conversion import pack_floats
+from .described import Configured
 from .door import Form
 from .fed import Fed
 from .joint_payload import read_joint, write_joint
@@ -35,7 +36,7 @@ _ROWS_WAITING = 256
 
 
 @register(3)
-class JointMoments(Fed, JointStatistics):
+class JointMoments(Fed, Configured, JointStatistics):
     """Means and joint central moments of several variables, in one pass; parts combine.
 
     =============  =================================================================
@@ -99,6 +100,7 @@ class JointMoments(Fed, JointStatistics):
     )  # fmt: skip
 
     _transform = None
+    _must_agree = ("dim", "order", "weights")
 
     def __init__(
         self,
@@ -403,29 +405,9 @@ class JointMoments(Fed, JointStatistics):
     # -- knowing -----------------------------------------------------------------------------
 
     @property
-    def order(self) -> int:
-        """The highest order kept."""
-        return self._order
-
-    @property
     def dim(self) -> int | None:
         """How many variables a row has; None before the first rows told."""
         return self._dim
-
-    @property
-    def names(self) -> tuple[str, ...] | None:
-        """The names of the variables, a tuple, or None."""
-        return self._names
-
-    @property
-    def weights(self) -> str | None:
-        """The kind of weights: None, "frequency" or "reliability"."""
-        return self._weights
-
-    @property
-    def nonfinite(self) -> str:
-        """What a missing entry does: "raise", "omit" or "propagate"."""
-        return self._nonfinite
 
     def summary(self) -> JointSummary:
         """The immutable summary of what has been fed so far.
@@ -522,28 +504,6 @@ class JointMoments(Fed, JointStatistics):
         self._stream.table[0] = row
         self._stream.tally[...] = tally
         self._stream.extremes[...] = extremes
-
-    def _gate(self, other, verb):
-        self._idle()
-        self._same_type(other)
-        mine, theirs = self._dim, other._dim
-        if mine is not None and theirs is not None and mine != theirs:
-            raise MergeError(
-                f"{verb} needs equal dim: this one has dim={mine}, the other dim={theirs}. "
-                "Nothing was changed"
-            )
-        for name in ("order", "weights"):
-            mine, theirs = getattr(self, name), getattr(other, name)
-            if mine != theirs:
-                raise MergeError(
-                    f"{verb} needs equal {name}: this one has {name}={mine!r}, the other "
-                    f"{name}={theirs!r}; make both with the same {name}. Nothing was changed"
-                )
-        if self._names is not None and other._names is not None and self._names != other._names:
-            raise MergeError(
-                f"{verb} needs equal names: this one has {self._names}, the other {other._names}. "
-                "Nothing was changed"
-            )
 
     # -- bytes -------------------------------------------------------------------------------
 

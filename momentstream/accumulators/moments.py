@@ -97,6 +97,8 @@ class Moments(Fed, Described):
         "_weights",
     )  # fmt: skip
 
+    _must_agree = ("order", "shape", "weights", "transform")
+
     def __init__(
         self,
         order: int = 4,
@@ -478,22 +480,6 @@ class Moments(Fed, Described):
         self._begin()
         self._stream.table[..., 0, :] = rows
         self._stream.tally[...] = tally
-
-    def _gate(self, other, verb):
-        self._idle()
-        self._same_type(other)
-        for name in ("order", "shape", "weights", "transform"):
-            mine, theirs = getattr(self, name), getattr(other, name)
-            if mine != theirs:
-                raise MergeError(
-                    f"{verb} needs equal {name}: this one has {name}={mine!r}, the other "
-                    f"{name}={theirs!r}; make both with the same {name}. Nothing was changed"
-                )
-        if self._names is not None and other._names is not None and self._names != other._names:
-            raise MergeError(
-                f"{verb} needs equal names: this one has {self._names}, the other {other._names}. "
-                "Nothing was changed"
-            )
 
     # -- bytes -------------------------------------------------------------------------------
 
