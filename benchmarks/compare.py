@@ -8,6 +8,13 @@
 The method, its doubts and how to read the table: README.md beside this file.
 """
 
+# ruff: noqa: E402
+import os
+
+# One thread on both sides: the linear algebra library has to be told before NumPy is imported.
+for _name in ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "OMP_NUM_THREADS"):
+    os.environ[_name] = "1"
+
 import argparse
 import functools
 import sys
@@ -19,6 +26,7 @@ from pathlib import Path
 from timeit import Timer
 
 import exact_rows
+import joint_rows
 import numpy as np
 import peers
 import report
@@ -334,6 +342,28 @@ ROWS = (
                            exact_rows.updating(normal), Result), at_least=True),
     Row("exact-kurtosis", "exact, the first kurtosis()", 200.0, "µs",
         exact_rows.reading_kurtosis(normal, Result)),
+    Row("joint-cov-3", "numpy.cov / joint order 2, 3 variables", 6.0, "×",
+        joint_rows.against_cov(3, Result), at_least=True),
+    Row("joint-cov-8", "numpy.cov / joint order 2, 8 variables", 3.0, "×",
+        joint_rows.against_cov(8, Result), at_least=True),
+    Row("joint-cov-16", "numpy.cov / joint order 2, 16 variables", 2.0, "×",
+        joint_rows.against_cov(16, Result), at_least=True),
+    Row("joint-cov-32", "numpy.cov / joint order 2, 32 variables", 1.4, "×",
+        joint_rows.against_cov(32, Result), at_least=True),
+    Row("joint-cov-64", "numpy.cov / joint order 2, 64 variables", 1.4, "×",
+        joint_rows.against_cov(64, Result), at_least=True),
+    Row("joint-3", "joint order 4, 3 variables, a row", 12.0, "ns",
+        joint_rows.nanoseconds_a_row(3, 4, Result)),
+    Row("joint-8", "joint order 4, 8 variables, a row", 100.0, "ns",
+        joint_rows.nanoseconds_a_row(8, 4, Result)),
+    Row("joint-16", "joint order 4, 16 variables, a row", 900.0, "ns",
+        joint_rows.nanoseconds_a_row(16, 4, Result)),
+    Row("joint-einsum", "numpy.einsum / joint order 4, 8 variables", 150.0, "×",
+        joint_rows.against_einsum(8, Result), at_least=True),
+    Row("joint-merge", "joint order 4, 8 variables, a.merge(b)", 100.0, "µs",
+        joint_rows.merging(8, 4, Result)),
+    Row("joint-one-row", "joint, update(one row of 3)", 2.0, "µs",
+        joint_rows.one_row(3, 2, Result)),
 )  # fmt: skip
 
 

@@ -16,7 +16,11 @@ STATISTICS = ("mean", "std", "skewness", "kurtosis", "minimum", "maximum")
 
 
 def shard_totals(*arguments):
-    command = [sys.executable, "-W", "error", EXAMPLES / "shard_totals.py", *arguments]
+    return example("shard_totals.py", *arguments)
+
+
+def example(name, *arguments):
+    command = [sys.executable, "-W", "error", EXAMPLES / name, *arguments]
     return subprocess.run(
         [str(part) for part in command], capture_output=True, encoding="utf-8", timeout=240
     )
@@ -196,3 +200,36 @@ def test_csv_is_read_in_bounded_memory(tmp_path):
     assert moments.count == 100_000
     # The file has 1.1 MB, and its 100,000 numbers as a list would take 3.2 MB.
     assert peak < 600_000
+
+
+def test_joint_totals_tell_what_no_worker_saw_whole():
+    result = example("joint_totals.py", "--stations", 3, "--rows", 60_000, "--workers", 2)
+    assert result.returncode == 0, result.stderr
+    specification = importlib.util.spec_from_file_location(
+        "joint_totals", EXAMPLES / "joint_totals.py"
+    )
+    module = importlib.util.module_from_spec(specification)
+    specification.loader.exec_module(module)
+    rows = np.concatenate([chunk for i in range(3) for chunk in module.shard(i, 60_000)])
+    assert "180,000 rows" in result.stdout
+    correlations = table(result.stdout, "correlation")
+    for i, name in enumerate(module.NAMES):
+        printed = [float(correlations[name][other]) for other in module.NAMES]
+        # Six significant digits are printed.
+        assert printed == pytest.approx(np.corrcoef(rows.T)[i].tolist(), rel=5.001e-6)
+    residue = (rows @ module.RESIDUE).tolist()
+    exact = exact_statistics(residue)
+    lines = {line.split("  ")[0]: line.split() for line in result.stdout.splitlines()}
+    for line in ("combined", "one pass"):
+        printed = lines[line][len(line.split()) :][:4]
+        for number, statistic in zip(printed, module.STATISTICS, strict=True):
+            assert float(number) == pytest.approx(exact[statistic], rel=5.001e-6)
+    assert not any(
+        cells[-1] == lines["combined"][-1] for n, cells in lines.items() if "station " in n
+    )
+
+
+def test_joint_totals_refuses_bad_options():
+    result = example("joint_totals.py", "--rows", 0)
+    assert result.returncode == 2
+    assert "--rows must be at least 1, got 0" in result.stderr

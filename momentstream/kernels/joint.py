@@ -24,7 +24,7 @@ import math
 import numpy as np
 
 from .compiling import compiled, internal, keep_apart, ldexp
-from .products import CHUNK, four, one
+from .products import CHUNK, eight, four, one, shift
 from .vector import BASE, LEVELS, NEW, exponent, is_finite, two_sum
 
 ROWS = 256  # rows that are transposed at a time
@@ -74,6 +74,10 @@ def first_sum(dim, k):
 def _tail_products(a, i, b, start, stop, chunks, out, place):
     """Add to ``out``, from ``place`` on, the dot products of run i of a with runs of b."""
     k = start
+    while k + 8 <= stop:
+        eight(a, i, b, k, chunks, out, place)
+        place += 8
+        k += 8
     while k + 4 <= stop:
         four(a, i, b, k, chunks, out, place)
         place += 4
@@ -89,20 +93,18 @@ def _tail_products(a, i, b, start, stop, chunks, out, place):
 def _center(x, first, n, pivot, columns, extremes):
     """Rows of x as runs of deviations from the pivot; the extremes on the way."""
     keep_apart()
+    chunks = (n + CHUNK - 1) // CHUNK
     for j in range(pivot.size):
         for r in range(n):
             columns[j, r] = x[first + r, j]
-        least = most = columns[j, 0]
-        for r in range(n):
-            value = columns[j, r]
-            least = value if value < least else least
-            most = value if value > most else most
-            columns[j, r] = value - pivot[j]
-        for r in range(n, (n + CHUNK - 1) // CHUNK * CHUNK):
+        for r in range(n, chunks * CHUNK):
+            columns[j, r] = columns[j, 0]
+        least, most = shift(columns, j, chunks, pivot[j])
+        for r in range(n, chunks * CHUNK):
             columns[j, r] = 0.0
-        if least < extremes[j, 0]:
+        if not least >= extremes[j, 0]:
             extremes[j, 0] = least
-        if most > extremes[j, 1]:
+        if not most <= extremes[j, 1]:
             extremes[j, 1] = most
 
 
@@ -287,7 +289,8 @@ def _reduce(x, w, weight, order, pivot, work, sums, firsts, extremes, row, stric
             constant = extremes[j, 0] == extremes[j, 1]
             if strict and not (2.0**-400 < second < 2.0**400) and not constant:
                 return False
-            if not is_finite(extremes[j, 0]) or not is_finite(extremes[j, 1]):
+            # A NaN may hide from the extremes, not from the sums.
+            if not is_finite(second) or not is_finite(extremes[j, 0] - extremes[j, 1]):
                 return False
             if constant and pivot[j] != extremes[j, 0]:
                 pivot[j] = extremes[j, 0]
