@@ -297,7 +297,7 @@ def test_what_is_refused_changes_nothing(given, error):
     assert both(got) == before
 
 
-@pytest.mark.parametrize("w", [[1.0, -1.0], [1.0, NAN], [1.0], [1.0, INF], np.ones((1, 2)), None])
+@pytest.mark.parametrize("w", [[1.0, -1.0], [1.0, NAN], [1.0], [1.0, INF], np.ones((2, 2)), None])
 def test_weights_that_are_refused(w):
     for kind in ("frequency", "reliability"):
         got = ms.JointMoments(2, weights=kind).update([1.0, 2.0], 1)

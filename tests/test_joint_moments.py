@@ -321,6 +321,19 @@ def test_powers_of_two_leave_pure_numbers_bit_for_bit(powers):
     halves = fed(scaled[:900]) + fed(scaled[900:])
     plain = fed(rows[:900]) + fed(rows[900:])
     assert np.array_equal(halves.cokurtosis(), plain.cokurtosis())
+    # Parts without a spread of their own: only the distances of their means have a size.
+    for sizes in ([1] * 5, [2, 1, 1], [1, 3]):
+        places = np.cumsum(sizes)[:-1]
+        single, wanted = (
+            ms.combine(fed(part) for part in np.split(given[: sum(sizes)], places))
+            for given in (scaled, rows)
+        )
+        assert np.array_equal(single.correlation(), wanted.correlation())
+        assert np.array_equal(single.cokurtosis(), wanted.cokurtosis())
+    steps = np.repeat(scaled[:3], BLOCK, axis=0)
+    assert np.array_equal(
+        fed(steps).cokurtosis(), fed(np.repeat(rows[:3], BLOCK, axis=0)).cokurtosis()
+    )
 
 
 @pytest.mark.parametrize("size", [1e300, 1e-300, 1e-160])

@@ -130,7 +130,8 @@ class JointStream(Stream):
         dim, order = self.channels, self.order
         lost = ~np.isfinite(x)
         columns = np.flatnonzero(lost.any(axis=0))
-        means = np.where(lost, x, 0.0).sum(axis=0)
+        with np.errstate(invalid="ignore"):
+            means = np.where(lost, x, 0.0).sum(axis=0)
         if len(columns):
             x = x.copy()
             x[:, columns] = 0.0

@@ -29,6 +29,7 @@ from .vector import BASE, LEVELS, NEW, exponent, is_finite, two_sum
 
 ROWS = 256  # rows that are transposed at a time
 _HEAD = 32
+_NOTHING = -1e9
 _CLOSER = 4  # times a pivot may be moved
 
 
@@ -470,17 +471,46 @@ def settle_units(row, order, dim):
 
 
 @internal
+def _spread_exponent(row, dim, j):
+    """The exponent of a variable's standard deviation; far below all others without spread."""
+    second = row[1 + 3 * dim + pair_place(dim, j, j)]
+    if not second > 0.0:
+        return _NOTHING
+    return row[1 + 2 * dim + j] + exponent(math.sqrt(second / row[0]))
+
+
+@internal
+def _mean_exponent(row, dim, j):
+    if row[1 + j] == 0.0 or not is_finite(row[1 + j]):
+        return _NOTHING
+    return row[1 + 2 * dim + j] + exponent(row[1 + j])
+
+
+@internal
+def _distance_exponent(a, b, dim, j, units):
+    """The exponent of the distance of two means, which ``units`` make neither large nor small."""
+    by_a, by_b = int(a[1 + 2 * dim + j] - units), int(b[1 + 2 * dim + j] - units)
+    distance = ldexp(a[1 + j], by_a) - ldexp(b[1 + j], by_b)
+    distance += ldexp(a[1 + dim + j], by_a) - ldexp(b[1 + dim + j], by_b)
+    if distance == 0.0 or not is_finite(distance):
+        return _NOTHING
+    return units + exponent(distance)
+
+
+@internal
 def _to_common_units(a, b, order, dim):
+    """Units of what the two together will spread over, 0 wherever that is safe."""
     by_a, by_b = np.zeros(dim), np.zeros(dim)
     change = False
     for j in range(dim):
-        scale_a, scale_b = a[1 + 2 * dim + j], b[1 + 2 * dim + j]
-        common = max(scale_a, scale_b)
-        delta = abs(ldexp(a[1 + j], int(scale_a - common)) - ldexp(b[1 + j], int(scale_b - common)))
-        # Far apart, the distance of the means sets the scale.
-        if is_finite(delta) and delta > 2.0**100:
-            common += exponent(delta)
-        by_a[j], by_b[j] = common - scale_a, common - scale_b
+        means = max(_mean_exponent(a, dim, j), _mean_exponent(b, dim, j))
+        spread = max(_spread_exponent(a, dim, j), _spread_exponent(b, dim, j))
+        if means > _NOTHING:
+            spread = max(spread, _distance_exponent(a, b, dim, j, means))
+        common = 0.0
+        if spread > _NOTHING and not -100 < spread < 100:
+            common = max(spread, means - 1000.0)
+        by_a[j], by_b[j] = common - a[1 + 2 * dim + j], common - b[1 + 2 * dim + j]
         change = change or by_a[j] != 0.0 or by_b[j] != 0.0
     weight_a = weight_b = 0.0
     end = first_sum(dim, order + 1)
