@@ -16,8 +16,8 @@ TINY = [[2.0**-900 * a, 2.0**900 * b] for a, b, _ in ROWS]
 WEIGHTS = [(i % 4) * 0.25 for i in range(60)]
 
 
-def fed(rows, weights=None, **settings):
-    return ms.JointMoments(len(rows[0]), 4, **settings).update(rows, weights)
+def fed(rows, beside=None, **settings):
+    return ms.JointMoments(len(rows[0]), 4, **settings).update(rows, beside)
 
 
 CASES = {
