@@ -1,4 +1,4 @@
-"""Promise 10 for joint moments: states of every past format keep loading, and mean what they did."""
+"""Promise 10 for joint moments: states of every past format load, and mean what they did."""
 
 import itertools
 from fractions import Fraction
