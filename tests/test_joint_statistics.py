@@ -19,8 +19,9 @@ from published import load, table
 
 import momentstream as ms
 from momentstream.algebra import central, joint
-from momentstream.statistics.joint import JointStatistics, JointView
+from momentstream.statistics.joint import JointStatistics
 from momentstream.statistics.joint_summary import JointSummary
+from momentstream.statistics.joint_view import JointView
 
 U = 2.0**-52
 CASES = {case["id"]: case for case in load("published/check_values.json")["cases"]}

@@ -11,8 +11,9 @@ from ..algebra.joint import JointVector, affine, remove, subset
 from ..codec import CONTINUED, register
 from ..display.text import one_line
 from ..errors import MergeError
-from ..statistics.joint import JointStatistics, JointView, place_of
+from ..statistics.joint import JointStatistics
 from ..statistics.joint_summary import JointSummary
+from ..statistics.joint_view import JointView, place_of
 from ..statistics.readout import checked_degree
 from .columns import frame_names, is_frame
 from .conversion import pack_floats, refuse_type
@@ -397,10 +398,6 @@ class JointMoments(Fed, Configured, JointStatistics):
         other._stream = self._stream.copy()
         other._settled = self._settled
         return other
-
-    def clear(self) -> Self:
-        """Forget everything that was fed; returns the accumulator itself."""
-        return super().clear()
 
     # -- knowing -----------------------------------------------------------------------------
 

@@ -12,7 +12,6 @@ any rounding.  A ratio is rounded once: to nearest, ties to even, subnormal numb
 included.
 """
 
-from fractions import Fraction
 from math import comb, copysign, inf, isqrt
 
 
@@ -39,11 +38,6 @@ def sums_about(count, sums, point):
         sum(comb(k, j) * whole[k - j] * (-point) ** j for j in range(k + 1))
         for k in range(1, len(whole))
     ]
-
-
-def power_of_two(exponent):
-    """2**exponent as a fraction."""
-    return Fraction(1 << exponent) if exponent >= 0 else Fraction(1, 1 << -exponent)
 
 
 def nearest(above, below=1, exponent=0):

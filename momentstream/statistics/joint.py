@@ -2,18 +2,17 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from math import erfc, nan, sqrt
-from typing import TYPE_CHECKING, Any, NamedTuple
+from math import nan
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from ..algebra import joint as algebra
 from ..algebra.central import shift
-from ..algebra.joint import JointVector
 from ..errors import OrderError
-from .laws import chi_square_survival
-from .readout import View, checked_ddof, checked_degree
+from . import joint_view as _of
+from .joint_view import JointView, Mardia, Regression, place_of, places_of
+from .readout import View, checked_degree
 from .summary import Summary
 
 if TYPE_CHECKING:
@@ -24,160 +23,6 @@ if TYPE_CHECKING:
     Which = int | str
 
 _HIGHEST_ORDER = 4
-# A divisor below this share of the weight is rounding alone.
-_ROUNDING = 2.0**-49
-# What others leave of a variable's variance is rounding alone below this share, by variable: a
-# second moment is right to some 128 units of the last place.
-_SINGULAR = 2.0**-45
-
-
-class JointView(NamedTuple):
-    """What the statistics are read from."""
-
-    order: int
-    dim: int
-    names: tuple[str, ...] | None
-    weights: Any  # None, "frequency" or "reliability"
-    readings: int  # number of readings; for frequencies the sum of the weights
-    omitted: int
-    vector: JointVector
-    minimum: Any  # shape (dim,)
-    maximum: Any
-
-
-@dataclass(frozen=True, slots=True)
-class Mardia:
-    """Mardia's multivariate skewness and kurtosis, and how unusual they are for normal readings."""
-
-    skewness: float  # b1
-    kurtosis: float  # b2; dim * (dim + 2) for the normal law
-    skewness_statistic: float  # n b1 / 6: chi-square for normal readings
-    kurtosis_statistic: float  # (b2 - dim (dim + 2)) / sqrt(8 dim (dim + 2) / n): standard normal
-    degrees_of_freedom: int  # of the chi-square law
-
-    @property
-    def skewness_pvalue(self) -> float:
-        """The chance of a larger ``skewness_statistic``; takes SciPy, the extra ``stats``."""
-        if self.skewness_statistic != self.skewness_statistic:
-            return nan
-        return chi_square_survival(self.skewness_statistic, self.degrees_of_freedom)
-
-    @property
-    def kurtosis_pvalue(self) -> float:
-        """The chance of a ``kurtosis_statistic`` farther from zero, two-sided."""
-        return erfc(abs(self.kurtosis_statistic) / sqrt(2.0))
-
-
-class Regression(NamedTuple):
-    """Least squares of one variable on others."""
-
-    coefficients: NDArray[np.float64]  # one for each variable regressed on, in their order
-    intercept: float
-    residual_variance: float  # divisor n - p - 1
-    r_squared: float
-    coefficient_errors: NDArray[np.float64]  # standard errors
-    intercept_error: float
-
-
-def place_of(view, which):
-    """The index of a variable given by index or name."""
-    if isinstance(which, str):
-        if view.names is None or which not in view.names:
-            raise KeyError(f"no variable is named {which!r}; the names are {view.names}")
-        return view.names.index(which)
-    place = checked_degree(which, -(2**62), "variable")
-    if not -view.dim <= place < view.dim:
-        raise IndexError(f"variable {place} is out of range: there are {view.dim}")
-    return place % view.dim
-
-
-def places_of(view, which):
-    """The indices of several variables, each given by index or name, or of one."""
-    if isinstance(which, str) or (np.ndim(which) == 0 and not hasattr(which, "__iter__")):
-        which = [which]
-    return [place_of(view, w) for w in which]
-
-
-def _finite_array(values, shape, name):
-    """A float array of this shape."""
-    try:
-        array = np.array(values, dtype=float)
-    except (TypeError, ValueError):
-        raise TypeError(f"{name} must be numbers, got {values!r}") from None
-    if array.shape != shape:
-        raise ValueError(f"{name} must have shape {shape}, got {array.shape}")
-    if not np.all(np.isfinite(array)):
-        raise ValueError(f"{name} must be finite, got {values!r}")
-    return array
-
-
-def _effective(view):
-    """Kish's effective number of readings, W**2 / V2; for other weights the weight."""
-    v = view.vector
-    if not v.weight > 0.0:
-        return 0.0
-    if view.weights != "reliability":
-        return float(shift(v.weight, v.weight_scale))
-    return float(v.weight * v.weight / v.powers[0])
-
-
-def _divisor(view, ddof):
-    """``W - ddof``, or ``W - ddof * V2 / W``, in the weight's units; nan where not positive."""
-    ddof = checked_ddof(ddof)
-    v = view.vector
-    if not v.weight > 0.0:
-        return nan
-    if view.weights == "reliability":
-        # One reading alone: W - V2 / W is zero, and rounds to something else.
-        loss = np.inf if view.readings < 2 and ddof > 0 else ddof * (v.powers[0] / v.weight)
-    else:
-        loss = shift(float(ddof), -v.weight_scale)
-    divisor = float(v.weight - loss)
-    return divisor if divisor > _ROUNDING * v.weight else nan
-
-
-def _moments(vector):
-    """Packed central moments of degree 2 on, and the variances; nan when empty."""
-    weight = vector.weight if vector.weight > 0.0 else nan
-    moments = [values / weight for values in vector.sums]
-    dim = len(vector.mean)
-    return moments, np.maximum(algebra.diagonal(moments[0], dim, 2), 0.0)
-
-
-def _standardized(vector, k):
-    """The packed standardized moments of degree k; ``vector`` in standard units."""
-    moments, variance = _moments(vector)
-    variance = np.where(variance > 0.0, variance, np.nan)
-    # In order of size, so that permuting the variables permutes the bits.
-    own = np.sort(variance[algebra.indices(len(vector.mean), k)], axis=1).T
-    below = np.sqrt(own[0] * own[1])
-    if k == 3:
-        below = below * np.sqrt(own[2])
-    if k == 4:
-        below = below * np.sqrt(own[2] * own[3])
-    return moments[k - 2] / below
-
-
-def _correlation(vector):
-    """The full correlation matrix, and the deviations; ``vector`` in standard units."""
-    dim = len(vector.mean)
-    _, variance = _moments(vector)
-    values = algebra.full(np.clip(_standardized(vector, 2), -1.0, 1.0), dim, 2)
-    values[np.diag_indices(dim)] = np.where(variance > 0.0, values.diagonal() * 0.0 + 1.0, np.nan)
-    return values, np.sqrt(variance)
-
-
-def _factor(correlation):
-    """The lower triangular factor of a correlation matrix; None where it is singular."""
-    dim = len(correlation)
-    if not np.all(np.isfinite(correlation)):
-        return None
-    try:
-        lower = np.linalg.cholesky(correlation)
-    except np.linalg.LinAlgError:
-        return None
-    # The square of a pivot: the share of a variance that those before leave unexplained.
-    return lower if np.all(lower.diagonal() ** 2 > dim * _SINGULAR) else None
 
 
 class JointStatistics:
@@ -225,7 +70,7 @@ class JointStatistics:
         """How many rows of equal weight would tell as much (Kish): W**2 / V2 for reliability
         weights, else the weight; 0 when empty."""
         with np.errstate(all="ignore"):
-            return _effective(self._joint())
+            return _of.effective(self._joint())
 
     # -- level and spread --------------------------------------------------------------------
 
@@ -279,7 +124,7 @@ class JointStatistics:
         v = view.vector
         with np.errstate(all="ignore"):
             by = v.scale[algebra.indices(view.dim, 2)].sum(axis=1)
-            values = shift(v.sums[0] / _divisor(view, ddof), by)
+            values = shift(v.sums[0] / _of.divisor(view, ddof), by)
             return algebra.full(values, view.dim, 2)
 
     def correlation(self) -> NDArray[np.float64]:
@@ -300,7 +145,7 @@ class JointStatistics:
         """
         view = self._need(2, "correlation()")
         with np.errstate(all="ignore"):
-            return _correlation(algebra.standard_units(view.vector))[0]
+            return _of.correlation(algebra.standard_units(view.vector))[0]
 
     # -- shape -------------------------------------------------------------------------------
 
@@ -322,7 +167,7 @@ class JointStatistics:
         """
         view = self._need(3, "coskewness()")
         with np.errstate(all="ignore"):
-            values = _standardized(algebra.standard_units(view.vector), 3)
+            values = _of.standardized(algebra.standard_units(view.vector), 3)
             return algebra.full(values, view.dim, 3)
 
     def cokurtosis(self) -> NDArray[np.float64]:
@@ -343,7 +188,7 @@ class JointStatistics:
         """
         view = self._need(4, "cokurtosis()")
         with np.errstate(all="ignore"):
-            values = _standardized(algebra.standard_units(view.vector), 4)
+            values = _of.standardized(algebra.standard_units(view.vector), 4)
             return algebra.full(values, view.dim, 4)
 
     def comoment(self, exponents: Sequence[int]) -> float:
@@ -420,18 +265,18 @@ class JointStatistics:
         degrees = dim * (dim + 1) * (dim + 2) // 6
         with np.errstate(all="ignore"):
             vector = algebra.standard_units(view.vector)
-            lower = _factor(_correlation(vector)[0])
+            lower = _of.factor(_of.correlation(vector)[0])
             if lower is None:
                 return Mardia(nan, nan, nan, nan, degrees)
             white = np.linalg.solve(lower, np.eye(dim))
-            third = algebra.full(_standardized(vector, 3), dim, 3)
+            third = algebra.full(_of.standardized(vector, 3), dim, 3)
             for _ in range(3):
                 third = np.tensordot(third, white, axes=(0, 1))
             skewness = float(np.sum(third * third))
             precision = (white.T @ white).ravel()
-            fourth = algebra.full(_standardized(vector, 4), dim, 4).reshape(dim * dim, dim * dim)
+            fourth = algebra.full(_of.standardized(vector, 4), dim, 4).reshape(dim * dim, dim * dim)
             kurtosis = float(precision @ fourth @ precision)
-            n = _effective(view)
+            n = _of.effective(view)
             normal = dim * (dim + 2.0)
             return Mardia(
                 skewness,
@@ -495,7 +340,7 @@ class JointStatistics:
         1.75
         """
         view = self._joint()
-        direction = _finite_array(direction, (view.dim,), "direction")
+        direction = _of.finite_array(direction, (view.dim,), "direction")
         vector = algebra.project(view.vector, direction)
         return self._summary_of(view, vector, nan, nan)
 
@@ -503,7 +348,7 @@ class JointStatistics:
     def _summary_of(view, vector, least, most):
         own = View(view.order, (), view.weights, view.readings, vector, least, most)
         return Summary._make(
-            own, count=view.readings, omitted=view.omitted, effective=_effective(view)
+            own, count=view.readings, omitted=view.omitted, effective=_of.effective(view)
         )
 
     # -- least squares -----------------------------------------------------------------------
@@ -563,8 +408,8 @@ class JointStatistics:
     def _regression(view, y, others):
         p = len(others)
         vector = algebra.standard_units(algebra.subset(view.vector, [*others, y]))
-        correlation, deviation = _correlation(vector)
-        lower = _factor(correlation[:p, :p])
+        correlation, deviation = _of.correlation(vector)
+        lower = _of.factor(correlation[:p, :p])
         unknown = np.full(p, nan)
         spread = deviation[p]
         if lower is None or not view.vector.weight > 0.0 or not np.isfinite(spread):
@@ -581,12 +426,12 @@ class JointStatistics:
         intercept = shift(residual.mean + residual.rest, residual.scale + vector.scale[p])
         r_squared = min(float(explained @ explained), 1.0)
         share = 1.0 - r_squared
-        if p and share <= (p + 1) * _ROUNDING:
+        if p and share <= (p + 1) * _of.ROUNDING:
             share = 0.0
-        divisor = _divisor(view, p + 1) if view.readings > p + 1 else nan
+        divisor = _of.divisor(view, p + 1) if view.readings > p + 1 else nan
         variance = share * spread * spread * (vector.weight / divisor)
         # In units of the target: the factor of the inverse covariance's diagonal.
-        n = _effective(view)
+        n = _of.effective(view)
         inflation = np.sqrt(np.sum(white * white, axis=0)) * ratio
         errors = shift(np.sqrt(variance / n) * inflation, by)
         level = white @ ((vector.mean[:p] + vector.rest[:p]) * ratio)
@@ -625,7 +470,7 @@ class JointStatistics:
         dim = view.dim
         with np.errstate(all="ignore"):
             vector = algebra.standard_units(view.vector)
-            moments, variance = _moments(vector)
+            moments, variance = _of.moments(vector)
             if not np.all(np.isfinite(moments[0])):
                 return np.full(dim, nan), np.full((dim, dim), nan)
             known = vector.scale[variance > 0.0]
@@ -674,7 +519,7 @@ class JointStatistics:
         if view.dim != 3:
             raise ValueError(f"an inertia tensor needs 3 variables, there are {view.dim}")
         if about is not None:
-            about = _finite_array(about, (3,), "about")
+            about = _of.finite_array(about, (3,), "about")
         v = view.vector
         if not v.weight > 0.0:
             return np.full((3, 3), nan)

@@ -11,7 +11,8 @@ from ..algebra.central import MomentVector
 from ..algebra.joint import JointVector
 from ..display.page import table
 from ..display.text import columns, label_text, number, one_line
-from .joint import JointStatistics, JointView
+from .joint import JointStatistics
+from .joint_view import JointView
 from .readout import View
 from .summary import Summary, _flat, _json
 
